@@ -1,0 +1,1 @@
+"""shaftproof: does a rotary encoder's interface do what its sheet says?"""

@@ -1,0 +1,1 @@
+"""Frames and counts to the residual between them: offset, direction, scale, latency, steps."""

@@ -1,0 +1,1 @@
+"""Sheet to a synthetic capture with known faults."""

@@ -1,0 +1,1 @@
+"""File to spans of edges: the only room that knows file layouts."""

@@ -1,0 +1,1 @@
+"""Edges to counts: quadrature, index, spacing."""

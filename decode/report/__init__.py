@@ -1,0 +1,1 @@
+"""Records to screens and files: the only room that knows a screen."""

@@ -1,0 +1,1 @@
+"""Edges to frames: clock bursts, fields, Gray, parity, CRC."""
