@@ -1,0 +1,226 @@
+"""Clock edges to bursts.
+
+A clocked interface has no start of file: a frame is a burst of clock edges between two idle times. What counts as
+idle is learnt once, from the first clock edges of the capture (the pilot), so that the rule is the same wherever the
+capture is cut: the level at which the clock rests, its period, and the widest gap in the sorted intervals at that
+level, which separates pauses inside a burst from pauses between bursts. A long interval at the other level never
+ends a burst (biss-c holds the clock low through the time-out to say a control bit).
+
+Edges in a burst alternate, so the k-th leading edge (away from rest) is edge 2k and the k-th trailing edge 2k + 1.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, fields, replace
+
+import numpy as np
+import numpy.typing as npt
+
+from decode.spans import BoolArray, Edges, IntArray
+
+PILOT_EDGES = 4096
+"""How many clock edges the rhythm is learnt from: some 50 frames, and a small part of any capture."""
+
+SHORT_PULSE = 0.5
+"""A clock phase shorter than this part of the usual one is not real (common practice, no source)."""
+
+LONE_BURST_PERIODS = 4
+"""Idle time, in clock periods, that ends a burst where the pilot holds only one (common practice, no source)."""
+
+Index = npt.NDArray[np.intp]
+
+
+@dataclass(frozen=True, slots=True)
+class Rhythm:
+    """What the pilot says about the clock. Times in ticks.
+
+    rest: level between bursts. period: one clock period. high, low: usual length of each phase.
+    split: an interval at the rest level longer than this ends a burst. pause: usual interval between bursts, None
+    where the pilot holds only one burst.
+    """
+
+    rest: int
+    period: float
+    high: float
+    low: float
+    split: float
+    pause: float | None
+
+    @classmethod
+    def of(cls, clock: Edges) -> Rhythm | None:
+        """Learn from the first edges of a clock; None where there are too few to tell (fewer than four)."""
+        times, levels = clock.times[:PILOT_EDGES], clock.levels[:PILOT_EDGES]
+        if times.size < 4:
+            return None
+        lengths, at = np.diff(times), levels[:-1]
+        high, low = (float(np.median(lengths[at == level])) for level in (1, 0))
+        period = high + low
+        if high > 8 * low or low > 8 * high:  # a few short bursts: the medians are pauses
+            shorter = 2 * min(high, low)
+            period, high, low = shorter, shorter / 2, shorter / 2
+        long = lengths > 1.5 * period
+        rest_time = [int(lengths[long & (at == level)].sum()) for level in (0, 1)]
+        rest = int(levels[-1]) if max(rest_time) == 0 else int(rest_time[1] >= rest_time[0])
+        split, pause = _split(lengths[at == rest], period)
+        return cls(rest, period, high, low, split, pause)
+
+    def phase(self, level: int) -> float:
+        """Usual length of the clock's phase at `level`, in ticks."""
+        return self.high if level else self.low
+
+
+def _split(rests: IntArray, period: float) -> tuple[float, float | None]:
+    """The length that separates phases of a burst from pauses, and the usual pause."""
+    rising = np.unique(rests[rests > 0]).astype(np.float64)
+    floor = rising[rising <= period]
+    above = np.concatenate([floor[-1:] if floor.size else [period / 2], rising[rising > period]])
+    if above.size < 2 or above[-1] < 1.5 * period:
+        return LONE_BURST_PERIODS * period, None
+    widest = int(np.argmax(above[1:] / above[:-1]))
+    split = max(float(np.sqrt(above[widest] * above[widest + 1])), 1.2 * period)
+    return split, float(np.median(rests[rests > split]))
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Bursts:
+    """Bursts of clock edges, cleaned of pulses too short to be real.
+
+    times: (e,) ticks of all edges kept. first, count: (n,) where each burst begins in `times` and how many edges it
+    has. opens: (n,) tick at which its window begins: the select line's, else its first clock edge. selected: (n,)
+    tick at which the select line chose it, or -1. glitches: (n,) short pulses taken out of each. glitch_time: (n,)
+    tick of the first of them, or -1. gap: (n,) longest pause inside a burst that should have ended it, 0 for none.
+    """
+
+    times: IntArray
+    first: Index
+    count: Index
+    opens: IntArray
+    selected: IntArray
+    glitches: IntArray
+    glitch_time: IntArray
+    gap: IntArray
+
+    def __len__(self) -> int:
+        return int(self.first.size)
+
+    @property
+    def first_edge(self) -> IntArray:
+        return self.times[self.first]
+
+    @property
+    def last_edge(self) -> IntArray:
+        return np.asarray(self.times[self.first + self.count - 1], np.int64)
+
+    def take(self, which: BoolArray | Index | slice) -> Bursts:
+        """Some of the bursts, with the same edges."""
+        rows = {row.name: getattr(self, row.name)[which] for row in fields(self) if row.name != "times"}
+        return replace(self, **rows)
+
+    def edge(self, numbers: Index) -> IntArray:
+        """(n, m) tick of edge number numbers[m] of each burst; -1 where the burst is over by then."""
+        wanted = self.first[:, None] + numbers[None, :]
+        inside = numbers[None, :] < self.count[:, None]
+        return np.where(inside, self.times[np.where(inside, wanted, 0)], np.int64(-1))
+
+    def rejoined(self, edges: int, pause: float) -> Bursts:
+        """Neighbouring pieces that make up one burst of `edges` edges, less than `pause` ticks apart, put together."""
+        pairs = np.flatnonzero(self._may_join(edges, pause) & (self.count[:-1] + self.count[1:] == edges))
+        if pairs.size == 0:
+            return self
+        gap = self.first_edge[1:] - self.last_edge[:-1]
+        keep, count, gaps = np.ones(len(self), np.bool_), self.count.copy(), self.gap.copy()
+        glitches, glitch_time = self.glitches.copy(), self.glitch_time.copy()
+        for pair in pairs:
+            if keep[pair]:
+                keep[pair + 1] = False
+                count[pair], gaps[pair] = edges, gap[pair]
+                glitches[pair] += glitches[pair + 1]
+                glitch_time[pair] = max(glitch_time[pair], glitch_time[pair + 1])
+        joined = replace(self, count=count, gap=gaps, glitches=glitches, glitch_time=glitch_time)
+        return joined.take(keep)
+
+    def last_may_grow(self, edges: int, pause: float) -> bool:
+        """Whether the last burst but one may turn out to be the first piece of a burst of `edges` edges."""
+        return len(self) > 1 and bool(self._may_join(edges, pause)[-1])
+
+    def _may_join(self, edges: int, pause: float) -> BoolArray:
+        close = self.first_edge[1:] - self.last_edge[:-1] < pause
+        return np.asarray(close & (self.count[:-1] < edges), np.bool_)
+
+
+def find_bursts(clock: Edges, select: Edges | None, rhythm: Rhythm) -> tuple[Bursts, IntArray]:
+    """The bursts of a stretch of clock edges, and the ticks of short clock pulses that lie outside any.
+
+    With a select line (active low) a burst is what lies between its falling and its next rising edge.
+    """
+    opens: IntArray
+    if select is None:
+        starts = _resting_starts(clock, rhythm)
+        stops = np.concatenate([starts[1:], [clock.times.size]]).astype(np.intp)[: starts.size]
+        opens = clock.times[starts]
+        selected = np.full(starts.size, -1, np.int64)
+    else:
+        down, up = _windows(select, rhythm)
+        starts, stops = (np.searchsorted(clock.times, edge, side="left") for edge in (down, up))
+        busy = stops > starts
+        starts, stops, opens = starts[busy], stops[busy], down[busy]
+        selected = opens
+    return _clean(clock.times, starts, stops, opens, selected, rhythm)
+
+
+def _resting_starts(clock: Edges, rhythm: Rhythm) -> Index:
+    """Indices of the edges of `clock` that begin a burst; the first edge always does."""
+    if clock.times.size == 0:
+        return np.empty(0, np.intp)
+    resting = (clock.levels[:-1] == rhythm.rest) & (np.diff(clock.times) > rhythm.split)
+    return np.concatenate([[0], np.flatnonzero(resting) + 1]).astype(np.intp)
+
+
+def _windows(select: Edges, rhythm: Rhythm) -> tuple[IntArray, IntArray]:
+    """Falling and rising ticks of the select line; pulses shorter than a clock phase do not count."""
+    times, levels = select.times, select.levels
+    if times.size > 1:
+        short = np.flatnonzero(np.diff(times) < SHORT_PULSE * min(rhythm.high, rhythm.low))
+        drop = np.unique(np.concatenate([short, short + 1]))
+        times, levels = np.delete(times, drop), np.delete(levels, drop)
+    down, up = times[levels == 0], times[levels == 1]
+    if select.initial == 0:  # selected before the stretch begins: open since ever
+        down = np.concatenate([[np.iinfo(np.int64).min], down])
+    if up.size < down.size:
+        up = np.concatenate([up, [np.iinfo(np.int64).max]])
+    return down, up[: down.size]
+
+
+def _clean(
+    times: IntArray, starts: Index, stops: Index, opens: IntArray, selected: IntArray, rhythm: Rhythm
+) -> tuple[Bursts, IntArray]:
+    """Bursts of `times` [starts, stops) without the pulses that are too short to be real.
+
+    In a run of short intervals the edges go in pairs from the end, so that ringing after a true edge leaves the true
+    edge, and a lone pulse leaves nothing.
+    """
+    inside = np.zeros(times.size + 1, np.int64)
+    np.add.at(inside, starts, 1)
+    np.add.at(inside, stops, -1)
+    keep = np.asarray(np.cumsum(inside)[:-1] > 0, np.bool_)  # edges outside every select window go first
+    short = np.zeros(times.size, np.bool_)  # the interval from this edge to the next, within one burst
+    if times.size:
+        short[:-1] = np.diff(times) < SHORT_PULSE * min(rhythm.high, rhythm.low)
+    short[stops - 1] = False
+    short &= keep
+    glitches, glitch_time = np.zeros(starts.size, np.int64), np.full(starts.size, -1, np.int64)
+    if short.any():
+        run_first = np.flatnonzero(short & ~np.concatenate([[False], short[:-1]]))
+        run_last = np.flatnonzero(short & ~np.concatenate([short[1:], [False]])) + 1
+        burst = np.searchsorted(starts, run_first, side="right") - 1
+        for first, last, number in zip(run_first, run_last, burst, strict=True):
+            odd = (last - first + 1) % 2
+            keep[first + odd : last + 1] = False
+            glitches[number] += (last - first + 1) // 2
+            if glitch_time[number] < 0:
+                glitch_time[number] = times[first + odd]
+    kept_before = np.concatenate([[0], np.cumsum(keep)])
+    begin, end = kept_before[starts].astype(np.intp), kept_before[stops].astype(np.intp)
+    bursts = Bursts(times[keep], begin, end - begin, opens, selected, glitches, glitch_time, np.zeros_like(opens))
+    real = bursts.count > 0
+    return bursts.take(real), glitch_time[~real & (glitches > 0)]

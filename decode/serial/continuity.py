@@ -1,0 +1,175 @@
+"""What only shows from one frame to the next: cadence, sign of life, standing still, jumping.
+
+Works on the whole table of frames, which is small against the capture, so it may look both ways. Where a counted
+position is at hand it decides whether the shaft moved; without one the frames themselves must say, and a doubt is no
+fault: a shaft that stops repeats its position rightly.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, replace
+
+import numpy as np
+import numpy.typing as npt
+
+from decode.serial.frames import Frames
+from decode.sheet import Serial
+from decode.spans import BoolArray, FloatArray, IntArray
+
+STEADY_SHARE = 0.6
+STEADY_SPREAD = 0.2
+"""A cadence is judged where this share of the frame periods lies within this part of the median (common practice,
+no source)."""
+
+NEIGHBOURS = 9
+"""Frames around one from which its usual scatter is taken."""
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Cadence:
+    """When frames came and when they did not.
+
+    period: ticks from one frame to the next as stated or found, None where there is no steady one. steps: (k,) frame
+    periods in ticks, those over a missing frame left out. due: (m,) ticks at which a missing frame was due.
+    after: (m,) index of the frame before each.
+    """
+
+    period: float | None
+    steps: IntArray
+    due: IntArray
+    after: IntArray
+
+
+def cadence(frames: Frames, stated: float | None) -> Cadence:
+    """The rhythm of frames; `stated` is the period in ticks where the sheet gives one."""
+    steps = np.diff(frames.first_edge)
+    joined = np.diff(frames.segment) == 0
+    usual = steps[joined]
+    none = np.empty(0, np.int64)
+    if usual.size == 0:
+        return Cadence(stated, usual, none, none)
+    period = stated
+    if period is None and usual.size >= 3:
+        median = float(np.median(usual))
+        if np.mean(np.abs(usual - median) <= STEADY_SPREAD * median) >= STEADY_SHARE:
+            period = median
+    if period is None:
+        return Cadence(None, usual, none, none)
+    skipped = np.where(joined, np.rint(steps / period).astype(np.int64) - 1, 0)
+    skipped = np.where(steps > 1.5 * period, skipped, 0)
+    where = np.flatnonzero(skipped > 0)
+    after = np.repeat(where, skipped[where])
+    number = np.arange(after.size) - np.repeat(np.cumsum(skipped[where]) - skipped[where], skipped[where]) + 1
+    due = frames.first_edge[after] + np.rint(number * (steps[after] / (skipped[after] + 1))).astype(np.int64)
+    return Cadence(period, usual[skipped[joined] == 0], due, after.astype(np.int64))
+
+
+def life_breaks(frames: Frames, serial: Serial, missing_after: IntArray, stale: BoolArray) -> BoolArray:
+    """(n,) frames whose sign-of-life counter did not go on by one from the last readable frame.
+
+    Both ways to wrap are accepted, with and without the value 0, and a master that skipped a cycle may or may not
+    have been counted. A single wrong value is one break, not two.
+    """
+    broken = np.zeros(len(frames), np.bool_)
+    bits = next((part.bits for part in serial.fields if part.name == "life"), None)
+    if bits is None:
+        return broken
+    rows = np.flatnonzero(frames.usable & ~stale)
+    skipped = np.bincount(missing_after, minlength=len(frames))
+    before = np.concatenate([[0], np.cumsum(skipped)])
+    life = frames.fields["life"].astype(np.int64)
+
+    def follows(later: IntArray, earlier: IntArray) -> BoolArray:
+        least = later - earlier
+        most = least + before[later] - before[earlier]
+        fits = np.zeros(later.size, np.bool_)
+        for modulus in (1 << bits, (1 << bits) - 1):
+            moved = (life[later] - life[earlier]) % modulus
+            fits |= (moved == least % modulus) | (moved == most % modulus)
+        return np.asarray(fits | (frames.segment[later] != frames.segment[earlier]), np.bool_)
+
+    bad = np.concatenate([[False], ~follows(rows[1:], rows[:-1])])[: rows.size]
+    again = np.flatnonzero(bad[1:] & bad[:-1]) + 1
+    again = again[again >= 2]
+    bad[again[follows(rows[again], rows[again - 2])]] = False
+    broken[rows[bad]] = True
+    return broken
+
+
+def wrapped_steps(position: IntArray, modulus: int) -> IntArray:
+    """(n - 1,) steps between positions, each taken the short way round."""
+    return (np.diff(position) + modulus // 2) % modulus - modulus // 2
+
+
+def stale_frames(frames: Frames, modulus: int, moved: FloatArray | None) -> BoolArray:
+    """(n,) frames that repeat the position of the one before although the shaft went on.
+
+    moved: (n,) position by the count, in steps of the serial position, NaN where it is not known; None without one.
+    With a count, the run must span more than one and a half steps and a count; without one, the frames around the
+    run must have moved steadily and the position must catch up after it.
+    """
+    stale = np.zeros(len(frames), np.bool_)
+    rows = np.flatnonzero(frames.usable)
+    if rows.size < 3:
+        return stale
+    steps = wrapped_steps(frames.position[rows], modulus)
+    still = (steps == 0) & (np.diff(frames.segment[rows]) == 0)
+    first = np.flatnonzero(still & ~np.concatenate([[False], still[:-1]]))
+    last = np.flatnonzero(still & ~np.concatenate([still[1:], [False]])) + 1
+    for begin, end in zip(first, last, strict=True):
+        if _stood_wrongly(rows, steps, moved, int(begin), int(end)):
+            stale[rows[begin + 1 : end + 1]] = True
+    return stale
+
+
+def _stood_wrongly(rows: npt.NDArray[np.intp], steps: IntArray, moved: FloatArray | None, begin: int, end: int) -> bool:
+    """Whether the run of equal positions rows[begin..end] hides a movement of the shaft."""
+    if moved is not None:
+        travel = np.abs(moved[rows[begin : end + 1]] - moved[rows[begin]])
+        known = travel[~np.isnan(travel)]
+        if known.size:
+            return bool(known.max() > 1.5)
+    around = np.concatenate([steps[max(begin - 8, 0) : begin], steps[end + 1 : end + 9]])
+    if around.size < 4 or end >= steps.size:
+        return False
+    usual = float(np.median(around))
+    caught_up = float(steps[end])
+    expected = usual * (end - begin + 1)
+    return bool(
+        abs(usual) >= 3
+        and np.all(np.abs(around - usual) <= max(2.0, 0.5 * abs(usual)))
+        and abs(caught_up - expected) <= 0.5 * abs(expected)
+    )
+
+
+def jumps_alone(frames: Frames, modulus: int, ignore: BoolArray) -> BoolArray:
+    """(n,) frames whose position does not lie between its neighbours', by the serial line alone.
+
+    A frame's deviation is its distance from the straight line through the frames around it; it is a jump where that
+    is far above the deviations of the frames nearby, which acceleration moves alike.
+    """
+    jumped = np.zeros(len(frames), np.bool_)
+    rows = np.flatnonzero(frames.usable & ~ignore)
+    if rows.size < NEIGHBOURS:
+        return jumped
+    steps = wrapped_steps(frames.position[rows], modulus).astype(np.float64)
+    spacing = np.diff(frames.latch[rows]).astype(np.float64)
+    speed = steps / spacing
+    bend = np.abs(np.diff(speed)) * np.minimum(spacing[:-1], spacing[1:]) / 2
+    padded = np.pad(bend, NEIGHBOURS // 2, mode="reflect")
+    usual = np.median(np.lib.stride_tricks.sliding_window_view(padded, NEIGHBOURS), axis=1)
+    far = bend > 4.0 + 8.0 * usual
+    # a single wild frame bends the course three times, most at itself
+    peak = far & (bend >= np.concatenate([[0.0], bend[:-1]])) & (bend > np.concatenate([bend[1:], [0.0]]))
+    jumped[rows[1:-1][peak]] = True
+    return jumped
+
+
+def judged(frames: Frames, serial: Serial, rhythm: Cadence, modulus: int, moved: FloatArray | None) -> Frames:
+    """The table with life_break and position_stale told; where nothing is counted, position_jump too."""
+    stale = stale_frames(frames, modulus, moved) if serial.position_bits else np.zeros(len(frames), np.bool_)
+    broken = life_breaks(frames, serial, rhythm.after, stale)
+    frames = frames.with_kind(stale, "position_stale").with_kind(broken, "life_break")
+    if moved is None and serial.position_bits:
+        frames = frames.with_kind(jumps_alone(frames, modulus, stale), "position_jump")
+    return replace(frames, usable=frames.usable & ~frames.is_any("position_stale", "position_jump"))
