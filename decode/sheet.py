@@ -367,9 +367,13 @@ def _impossible_serial(serial: Serial) -> Iterator[tuple[str, str, str]]:
 
 def _impossible_check(serial: Serial, number: int, path: str) -> Iterator[tuple[str, str, str]]:
     field = serial.fields[number]
+    if field.name in ("crc", "parity"):
+        yield from _impossible_cover(serial, number, path)
     if field.name == "crc":
         if field.polynomial is None:
             yield path, "a crc without its polynomial", "polynomial = 0x43 (with its leading term)"
+        elif field.polynomial < 0:
+            yield f"{path}.polynomial", "a negative polynomial", "a polynomial with its leading term, such as 0x43"
         elif field.polynomial.bit_length() - 1 != field.bits:
             degree = field.polynomial.bit_length() - 1
             yield (
@@ -389,6 +393,20 @@ def _impossible_check(serial: Serial, number: int, path: str) -> Iterator[tuple[
             yield path, "a fixed field without its value", "value = 0"
         elif not 0 <= field.value < 1 << field.bits:
             yield f"{path}.value", "does not fit into the field", f"0 to {(1 << field.bits) - 1}"
+
+
+def _impossible_cover(serial: Serial, number: int, path: str) -> Iterator[tuple[str, str, str]]:
+    field = serial.fields[number]
+    covered = serial.covered(number)
+    bits = sum(serial.fields[i].bits for i in covered)
+    if bits == 0:
+        yield path, "a check that covers nothing", "covers = [...], or another field in the word"
+    if number in covered:
+        yield f"{path}.covers", "a check that covers itself", "other fields"
+    if field.reflected and bits % 8:
+        yield f"{path}.reflected", f"a reflected CRC over {bits} bits", "whole bytes: a multiple of 8 bits"
+    if field.mask is not None and not 0 < field.mask < 1 << bits:
+        yield f"{path}.mask", "a mask that does not fit the covered fields", f"0x1 to 0x{(1 << bits) - 1:X}"
 
 
 def _impossible_incremental(incremental: Incremental) -> Iterator[tuple[str, str, str]]:

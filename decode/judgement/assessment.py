@@ -81,8 +81,7 @@ def single(
     name: str, value: float, *, uncertainty: float, limit: Limit | None = None, n: int = 1, line: str | None = None
 ) -> Measurement:
     """A measurement that is one number."""
-    one = measured(name, line, np.array([value]), np.array([n], np.int64), uncertainty=uncertainty, limit=limit)
-    return one
+    return measured(name, line, np.array([value]), np.array([n], np.int64), uncertainty=uncertainty, limit=limit)
 
 
 def missing(name: str, line: str | None, limit: Limit | None, reason: str) -> Measurement:
