@@ -367,8 +367,6 @@ def _impossible_serial(serial: Serial) -> Iterator[tuple[str, str, str]]:
 
 def _impossible_check(serial: Serial, number: int, path: str) -> Iterator[tuple[str, str, str]]:
     field = serial.fields[number]
-    if field.name in ("crc", "parity"):
-        yield from _impossible_cover(serial, number, path)
     if field.name == "crc":
         if field.polynomial is None:
             yield path, "a crc without its polynomial", "polynomial = 0x43 (with its leading term)"
@@ -393,6 +391,8 @@ def _impossible_check(serial: Serial, number: int, path: str) -> Iterator[tuple[
             yield path, "a fixed field without its value", "value = 0"
         elif not 0 <= field.value < 1 << field.bits:
             yield f"{path}.value", "does not fit into the field", f"0 to {(1 << field.bits) - 1}"
+    if field.name in ("crc", "parity"):
+        yield from _impossible_cover(serial, number, path)
 
 
 def _impossible_cover(serial: Serial, number: int, path: str) -> Iterator[tuple[str, str, str]]:
