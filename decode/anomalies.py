@@ -8,11 +8,13 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass, field
-from typing import Any
+from typing import Any, Literal
 
 import numpy as np
 
 from decode.spans import IntArray
+
+Severity = Literal["fault", "warning", "note"]
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -34,7 +36,7 @@ class Anomalies:
     line: str | None = None
     causes: Sequence[str | None] | None = None
     evidence: dict[str, Sequence[Any] | np.ndarray[Any, Any]] = field(default_factory=dict)
-    severity: str | None = None
+    severity: Severity | None = None
 
     def __len__(self) -> int:
         return int(self.times.size)

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from typing import Literal, NamedTuple
 
-Severity = Literal["fault", "warning", "note"]
+from decode.anomalies import Severity
 
 
 class Kind(NamedTuple):

@@ -10,7 +10,7 @@ from typing import Any, Literal
 
 import msgspec
 
-from decode.judgement.kinds import Severity
+from decode.anomalies import Severity
 
 Verdict = Literal["pass", "fail", "undecided"]
 SCHEMA = "shaftproof.report/1"

@@ -27,6 +27,9 @@ SHORT_PULSE = 0.5
 LONE_BURST_PERIODS = 4
 """Idle time, in clock periods, that ends a burst where the pilot holds only one (common practice, no source)."""
 
+SINCE_EVER = np.iinfo(np.int64).min
+"""Tick of a select edge that lies before the stretch begins."""
+
 Index = npt.NDArray[np.intp]
 
 
@@ -163,7 +166,9 @@ def find_bursts(clock: Edges, select: Edges | None, rhythm: Rhythm) -> tuple[Bur
         down, up = _windows(select, rhythm)
         starts, stops = (np.searchsorted(clock.times, edge, side="left") for edge in (down, up))
         busy = stops > starts
-        starts, stops, opens = starts[busy], stops[busy], down[busy]
+        starts, stops = starts[busy], stops[busy]
+        unseen = down[busy] == SINCE_EVER
+        opens = np.where(unseen, clock.times[starts], down[busy])
         selected = opens
     return _clean(clock.times, starts, stops, opens, selected, rhythm)
 
@@ -185,7 +190,7 @@ def _windows(select: Edges, rhythm: Rhythm) -> tuple[IntArray, IntArray]:
         times, levels = np.delete(times, drop), np.delete(levels, drop)
     down, up = times[levels == 0], times[levels == 1]
     if select.initial == 0:  # selected before the stretch begins: open since ever
-        down = np.concatenate([[np.iinfo(np.int64).min], down])
+        down = np.concatenate([[SINCE_EVER], down])
     if up.size < down.size:
         up = np.concatenate([up, [np.iinfo(np.int64).max]])
     return down, up[: down.size]

@@ -12,7 +12,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 import numpy.typing as npt
 
-from decode.serial.frames import Frames
+from decode.serial.frames import CODE, Frames
 from decode.sheet import Serial
 from decode.spans import BoolArray, FloatArray, IntArray
 
@@ -20,6 +20,18 @@ STEADY_SHARE = 0.6
 STEADY_SPREAD = 0.2
 """A cadence is judged where this share of the frame periods lies within this part of the median (common practice,
 no source)."""
+
+SPOILT_BY_STUCK_DATA = (
+    "no_acknowledge",
+    "no_start_bit",
+    "frame_short",
+    "crc_mismatch",
+    "parity_mismatch",
+    "fixed_mismatch",
+    "error_flag",
+    "position_jump",
+    "position_stale",
+)
 
 NEIGHBOURS = 9
 """Frames around one from which its usual scatter is taken."""
@@ -64,7 +76,7 @@ def cadence(frames: Frames, stated: float | None) -> Cadence:
     return Cadence(period, usual[skipped[joined] == 0], due, after.astype(np.int64))
 
 
-def life_breaks(frames: Frames, serial: Serial, missing_after: IntArray, stale: BoolArray) -> BoolArray:
+def life_breaks(frames: Frames, serial: Serial, missing_after: IntArray) -> BoolArray:
     """(n,) frames whose sign-of-life counter did not go on by one from the last readable frame.
 
     Both ways to wrap are accepted, with and without the value 0, and a master that skipped a cycle may or may not
@@ -74,7 +86,7 @@ def life_breaks(frames: Frames, serial: Serial, missing_after: IntArray, stale: 
     bits = next((part.bits for part in serial.fields if part.name == "life"), None)
     if bits is None:
         return broken
-    rows = np.flatnonzero(frames.usable & ~stale)
+    rows = np.flatnonzero(frames.usable)
     skipped = np.bincount(missing_after, minlength=len(frames))
     before = np.concatenate([[0], np.cumsum(skipped)])
     life = frames.fields["life"].astype(np.int64)
@@ -101,12 +113,13 @@ def wrapped_steps(position: IntArray, modulus: int) -> IntArray:
     return (np.diff(position) + modulus // 2) % modulus - modulus // 2
 
 
-def stale_frames(frames: Frames, modulus: int, moved: FloatArray | None) -> BoolArray:
+def stale_frames(frames: Frames, modulus: int, moved: FloatArray | None, count_step: float = 0.0) -> BoolArray:
     """(n,) frames that repeat the position of the one before although the shaft went on.
 
     moved: (n,) position by the count, in steps of the serial position, NaN where it is not known; None without one.
-    With a count, the run must span more than one and a half steps and a count; without one, the frames around the
-    run must have moved steadily and the position must catch up after it.
+    count_step: one count in such steps. With a count, the shaft must have moved by more than one and a half steps and
+    one count during the run; without one, the frames around the run must have moved steadily and the position must
+    catch up after it.
     """
     stale = np.zeros(len(frames), np.bool_)
     rows = np.flatnonzero(frames.usable)
@@ -117,18 +130,20 @@ def stale_frames(frames: Frames, modulus: int, moved: FloatArray | None) -> Bool
     first = np.flatnonzero(still & ~np.concatenate([[False], still[:-1]]))
     last = np.flatnonzero(still & ~np.concatenate([still[1:], [False]])) + 1
     for begin, end in zip(first, last, strict=True):
-        if _stood_wrongly(rows, steps, moved, int(begin), int(end)):
+        if _stood_wrongly(rows, steps, moved, 1.5 + count_step, int(begin), int(end)):
             stale[rows[begin + 1 : end + 1]] = True
     return stale
 
 
-def _stood_wrongly(rows: npt.NDArray[np.intp], steps: IntArray, moved: FloatArray | None, begin: int, end: int) -> bool:
+def _stood_wrongly(
+    rows: npt.NDArray[np.intp], steps: IntArray, moved: FloatArray | None, least: float, begin: int, end: int
+) -> bool:
     """Whether the run of equal positions rows[begin..end] hides a movement of the shaft."""
     if moved is not None:
         travel = np.abs(moved[rows[begin : end + 1]] - moved[rows[begin]])
         known = travel[~np.isnan(travel)]
-        if known.size:
-            return bool(known.max() > 1.5)
+        if known.size and known.max() > least:
+            return True
     around = np.concatenate([steps[max(begin - 8, 0) : begin], steps[end + 1 : end + 9]])
     if around.size < 4 or end >= steps.size:
         return False
@@ -142,14 +157,14 @@ def _stood_wrongly(rows: npt.NDArray[np.intp], steps: IntArray, moved: FloatArra
     )
 
 
-def jumps_alone(frames: Frames, modulus: int, ignore: BoolArray) -> BoolArray:
+def jumps_alone(frames: Frames, modulus: int) -> BoolArray:
     """(n,) frames whose position does not lie between its neighbours', by the serial line alone.
 
     A frame's deviation is its distance from the straight line through the frames around it; it is a jump where that
     is far above the deviations of the frames nearby, which acceleration moves alike.
     """
     jumped = np.zeros(len(frames), np.bool_)
-    rows = np.flatnonzero(frames.usable & ~ignore)
+    rows = np.flatnonzero(frames.usable)
     if rows.size < NEIGHBOURS:
         return jumped
     steps = wrapped_steps(frames.position[rows], modulus).astype(np.float64)
@@ -165,11 +180,33 @@ def jumps_alone(frames: Frames, modulus: int, ignore: BoolArray) -> BoolArray:
     return jumped
 
 
-def judged(frames: Frames, serial: Serial, rhythm: Cadence, modulus: int, moved: FloatArray | None) -> Frames:
-    """The table with life_break and position_stale told; where nothing is counted, position_jump too."""
-    stale = stale_frames(frames, modulus, moved) if serial.position_bits else np.zeros(len(frames), np.bool_)
-    broken = life_breaks(frames, serial, rhythm.after, stale)
-    frames = frames.with_kind(stale, "position_stale").with_kind(broken, "life_break")
-    if moved is None and serial.position_bits:
-        frames = frames.with_kind(jumps_alone(frames, modulus, stale), "position_jump")
-    return replace(frames, usable=frames.usable & ~frames.is_any("position_stale", "position_jump"))
+def stood_still(
+    frames: Frames, serial: Serial, modulus: int, moved: FloatArray | None, count_step: float = 0.0
+) -> Frames:
+    """The table with position_stale told; see stale_frames. Such frames are not usable any more."""
+    if serial.position_bits == 0:
+        return frames
+    stale = stale_frames(frames, modulus, moved, count_step)
+    return replace(frames.with_kind(stale, "position_stale"), usable=frames.usable & ~stale)
+
+
+def jumped_alone(frames: Frames, modulus: int) -> Frames:
+    """The table with position_jump told by the serial line alone; see jumps_alone."""
+    return frames.with_kind(jumps_alone(frames, modulus), "position_jump")
+
+
+def with_breaks(frames: Frames, serial: Serial, rhythm: Cadence) -> Frames:
+    """The table with life_break told; see life_breaks."""
+    return frames.with_kind(life_breaks(frames, serial, rhythm.after), "life_break")
+
+
+def absorbed(frames: Frames) -> Frames:
+    """The table with the frame on either side of a stretch of stuck data counted to it, where it too is spoilt.
+
+    A line seldom stops or comes back between two frames.
+    """
+    stuck = frames.is_any("data_stuck")
+    spoilt = frames.is_any(*SPOILT_BY_STUCK_DATA)
+    beside = spoilt & (np.concatenate([[False], stuck[:-1]]) | np.concatenate([stuck[1:], [False]]))
+    kind = np.where(beside, np.int8(CODE["data_stuck"]), frames.kind)
+    return replace(frames, kind=kind, usable=frames.usable & ~beside)

@@ -80,7 +80,8 @@ class Receiver:
         self._stray: list[IntArray] = []
         self._clock = self._data = Edges.none(UNKNOWN)
         self._select: Edges | None = None
-        self._start, self._until, self._last_edge = 0, 0, -1
+        self._start, self._until, self._kept, self._last_edge = 0, 0, 0, -1
+        self._selected_at_start = False
         self._segment = -1
         self._open = False
 
@@ -96,7 +97,8 @@ class Receiver:
             self._select = select if self._select is None or select is None else self._select.then(select)
         else:
             self._clock, self._data, self._select = clock, data, select
-            self._start, self._last_edge = span.start, -1
+            self._start, self._kept, self._last_edge = span.start, span.start, -1
+            self._selected_at_start = select is not None and select.initial == 0
             self._segment += 1
             self._open = True
         self._until = span.stop
@@ -111,6 +113,11 @@ class Receiver:
         frames = self._read(closing=True)
         self._open = False
         return frames
+
+    @property
+    def settled(self) -> int:
+        """No frame still to come has its latch before this tick."""
+        return self._kept
 
     def notes(self) -> list[str]:
         """What was taken for granted or left out."""
@@ -142,7 +149,7 @@ class Receiver:
         """Read every burst that is over, and forget its edges."""
         if self.rhythm is None:
             self.rhythm = Rhythm.of(self._clock)
-            if self.rhythm is None:
+            if self.rhythm is None:  # closing: the stretch holds less than a frame
                 self.partial += int(self._clock.times.size > 0)
                 return Frames.none(self.serial)
             self.habit = self._learn(self.rhythm)
@@ -166,6 +173,7 @@ class Receiver:
             self._frames(whole.take(slice(at, at + BATCH)), stops[at : at + BATCH], self.rhythm, self.habit, closing)
             for at in range(0, len(whole), BATCH)
         ]
+        self._kept = keep
         self._clock = self._clock.between(keep, self._until)
         self._data = self._data.between(keep, self._until)
         self._select = None if self._select is None else self._select.between(keep, self._until)
@@ -216,7 +224,7 @@ class Receiver:
         as_usual = reading.complete & (reading.clocks == habit.clocks)
         if self._last_edge < 0 and not as_usual[0]:
             lead = bursts.first_edge[0] - self._start
-            whole[0] &= lead > rhythm.split if self._select is None else bursts.selected[0] >= self._start
+            whole[0] &= lead > rhythm.split if self._select is None else not self._selected_at_start
         if closing and stops[-1] == self._until and not as_usual[-1]:
             tail = self._until - bursts.last_edge[-1] > rhythm.split + habit.late * rhythm.period
             whole[-1] &= tail if self._select is None else self._select.final == 1

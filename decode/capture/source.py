@@ -1,0 +1,67 @@
+"""The door of the room: what a capture is to the rest of the house, and how to open one.
+
+Whatever layout a file has, it becomes a `Capture`: names of signal columns, seconds per tick, and spans of edges.
+A new layout is a new class with these members and a line in `open_capture`; no other room knows of it.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterator, Sequence
+from fractions import Fraction
+from pathlib import Path
+from typing import Protocol
+
+from decode.anomalies import Anomalies
+from decode.capture.delimited import DelimitedCapture
+from decode.sheet import CaptureKeys
+from decode.spans import Span
+
+ROWS_PER_SPAN = 200_000
+
+
+class Capture(Protocol):
+    """A file of edges.
+
+    file: its name as the user gave it. layout: one line that a user understands. columns: names of the signal
+    columns; without a header "1", "2", ... by their place among all columns of the file. tick: seconds per tick.
+
+    Complete once the spans are exhausted: rows; first and last (the earliest and the latest time, ticks); grid (the
+    greatest common divisor of the time differences, ticks: the sampling resolution; 1 for numbered samples); notes
+    (everything inferred, skipped or not used); anomalies (breaks of the time axis); digest (SHA-256 of the file's
+    bytes, hex).
+    """
+
+    file: str
+    layout: str
+    columns: tuple[str, ...]
+    tick: Fraction
+    digest: str
+
+    @property
+    def rows(self) -> int: ...
+    @property
+    def first(self) -> int: ...
+    @property
+    def last(self) -> int: ...
+    @property
+    def grid(self) -> int: ...
+    @property
+    def notes(self) -> list[str]: ...
+    @property
+    def anomalies(self) -> list[Anomalies]: ...
+
+    def column(self, line: str | int) -> str:
+        """The column that an entry of [lines] means: its name, the name in other letters where only one matches, or
+        its number from 1 among all columns. Raises InputError, with the columns and the nearest name."""
+
+    def spans(self, columns: Sequence[str]) -> Iterator[Span]:
+        """Consecutive spans with the edges of `columns`. Raises InputError at the row that cannot be used."""
+
+
+def open_capture(path: str | Path, keys: CaptureKeys, *, rows_per_span: int = ROWS_PER_SPAN) -> Capture:
+    """Open a capture and tell its layout from its first rows.
+
+    rows_per_span: lines of the file read at a time, and so the most rows in a span. Raises InputError for a file
+    that is no capture, or about which neither it nor `keys` says enough.
+    """
+    return DelimitedCapture(Path(path), keys, rows_per_span)

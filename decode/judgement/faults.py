@@ -1,0 +1,314 @@
+"""What the machines cannot see alone: lines that are stuck, sampling too coarse, disagreement; then the folding."""
+
+from __future__ import annotations
+
+import numpy as np
+
+from decode.anomalies import Anomalies
+from decode.judgement.evidence import Evidence, modulus, travel_after
+from decode.judgement.folding import (
+    OF_BITS,
+    OF_COUNT,
+    OF_EDGES,
+    OF_SERIAL,
+    OF_SERIAL_TIMING,
+    Docket,
+    from_on,
+    near,
+    of_line,
+    ticks_of,
+    within,
+)
+from decode.judgement.records import Measurement
+from decode.serial.causes import frame_anomalies, missing_anomalies
+from decode.spans import IntArray
+
+SAMPLES_NEEDED = 4
+"""Samples in a clock period and in an A/B state below which nothing is decided (common practice, no source)."""
+
+STUCK_FRAMES = 10
+"""A data line that is stuck for the last so many frames counts as stuck for good."""
+
+PARTNER_EDGES = 64
+"""Edges of the other channel without one of this channel, to the capture's end, that make it stuck."""
+
+STUCK_TURNS = 1 / 16
+"""Serial travel without an A or B edge, to the capture's end, that makes the line stuck, in turns."""
+
+
+def docket(evidence: Evidence, measurements: list[Measurement]) -> Docket:
+    """Every anomaly of the capture with consequences folded into their causes."""
+    found = Docket([*evidence.capture.anomalies, *evidence.pair_anomalies])
+    if evidence.serial is not None and evidence.sheet.serial is not None:
+        serial = evidence.serial
+        for one in serial.anomalies:
+            found.add(one)
+        for one in missing_anomalies(serial.cadence, evidence.lines):
+            found.add(one)
+        word = modulus(evidence.sheet.serial)
+        for one in frame_anomalies(serial.frames, evidence.sheet.serial, serial.habit, evidence.lines, word):
+            found.add(one)
+    if evidence.incremental is not None:
+        for one in evidence.incremental.anomalies:
+            found.add(one)
+        _index_state(evidence, found)
+    _agreement(evidence, measurements, found)
+    _fold(evidence, found)
+    return found
+
+
+def _fold(evidence: Evidence, found: Docket) -> None:
+    coarse = too_coarse(evidence)
+    stuck = _stuck(evidence, found)
+    for one in stuck:
+        found.add(one)
+    for role in coarse:
+        _add_coarse(evidence, found, role)
+    _fold_stuck(evidence, found, stuck)
+    _fold_pairs(evidence, found)
+    illegal = ticks_of(found.of("illegal_transition"))
+    if illegal.size:
+        _fold_illegal(evidence, found, illegal)
+    _fold_turns(found)
+    if found.has("direction_opposed", "scale_wrong"):
+        found.withdraw(("residual_high", "latency_high"))
+    if found.has("direction_opposed"):
+        found.withdraw(("index_misplaced",), lambda one: np.full(len(one), "state_seen" in one.evidence))
+
+
+# ---- the capture --------------------------------------------------------------------------------------------------
+
+
+def too_coarse(evidence: Evidence) -> list[str]:
+    """The roles ("clock", "a") whose edges come too fast for the sampling."""
+    step, coarse = evidence.capture.grid, []
+    if evidence.serial is not None:
+        periods = evidence.serial.timings["clock_period"]
+        if periods.n and periods.percentile(50) < SAMPLES_NEEDED * step:
+            coarse.append("clock")
+    result = evidence.incremental
+    if result is not None and result.edges:
+        spacing = result.distributions["edge_spacing_s"]
+        mostly_illegal = result.illegal > result.edges / 20
+        shortest = spacing.percentile(1) if spacing.n >= SAMPLES_NEEDED else None
+        if mostly_illegal or (shortest is not None and shortest < SAMPLES_NEEDED * step):
+            fastest = evidence.capture.last - evidence.capture.first
+            if shortest is not None or fastest / result.edges < SAMPLES_NEEDED * SAMPLES_NEEDED * step:
+                coarse.append("a")
+    return coarse
+
+
+def _add_coarse(evidence: Evidence, found: Docket, role: str) -> None:
+    if role == "clock":
+        assert evidence.serial is not None
+        withdrawn = found.withdraw(OF_SERIAL_TIMING)
+        period = evidence.serial.timings["clock_period"].percentile(50)
+        samples = {"samples_per_period": [round(period / evidence.capture.grid, 2)]}
+        first = evidence.serial.frames.first_edge[:1]
+    else:
+        withdrawn = found.withdraw((*OF_EDGES, "offset_step"))
+        samples = {}
+        first = np.array([evidence.capture.first], np.int64)
+    time = first if first.size else np.array([evidence.capture.first], np.int64)
+    found.add(
+        Anomalies(
+            "undersampled",
+            time,
+            line=evidence.lines[role],
+            evidence={"needed_samples": [SAMPLES_NEEDED], "findings_withdrawn": [withdrawn], **samples},
+        )
+    )
+
+
+# ---- stuck lines --------------------------------------------------------------------------------------------------
+
+
+def _stuck(evidence: Evidence, found: Docket) -> list[Anomalies]:
+    stuck = [*_stuck_serial(evidence), *_stuck_channels(evidence)]
+    index = evidence.lines.get("index")
+    turn = evidence.counts_per_turn()
+    result = evidence.incremental
+    if index is not None and turn is not None and result is not None and not any(stuck):
+        activity = evidence.activity[index]
+        travelled = abs(result.net_counts) / turn
+        if activity.edges == 0 and travelled >= 1.5:
+            stuck.append(_stuck_at(index, evidence.capture.first, activity.level_at_start))
+    return stuck
+
+
+def _stuck_at(line: str, tick: int, level: int) -> Anomalies:
+    return Anomalies("line_stuck", np.array([tick], np.int64), line=line, evidence={"level": [level]})
+
+
+def _stuck_serial(evidence: Evidence) -> list[Anomalies]:
+    if evidence.serial is None:
+        return []
+    lines, frames = evidence.lines, evidence.serial.frames
+    clock, data = evidence.activity[lines["clock"]], evidence.activity[lines["data"]]
+    start = evidence.capture.first
+    if clock.edges == 0:
+        return [_stuck_at(lines["clock"], start, clock.level_at_start)]
+    select = lines.get("select")
+    if select is not None and evidence.activity[select].edges == 0:
+        return [_stuck_at(select, start, evidence.activity[select].level_at_start)]
+    if data.edges == 0:
+        return [_stuck_at(lines["data"], start, data.level_at_start)]
+    period = evidence.serial.cadence.period
+    assert clock.last is not None
+    if (
+        period is not None
+        and evidence.capture.last - clock.last > STUCK_FRAMES * period
+        and len(frames) >= STUCK_FRAMES
+    ):
+        return [_stuck_at(lines["clock"], clock.last, evidence.serial.rhythm.rest if evidence.serial.rhythm else 1)]
+    last = frames.is_any("data_stuck", "no_acknowledge")
+    run = int(np.argmin(last[::-1])) if not last.all() else len(frames)
+    if run >= STUCK_FRAMES and data.last is not None and data.last <= frames.last_edge[-run]:
+        return [_stuck_at(lines["data"], data.last, data.level_at_start ^ (data.edges & 1))]
+    return []
+
+
+def _stuck_channels(evidence: Evidence) -> list[Anomalies]:
+    if evidence.incremental is None:
+        return []
+    stuck = []
+    for role, partner in (("a", "b"), ("b", "a")):
+        line = evidence.activity[evidence.lines[role]]
+        since = evidence.capture.first if line.last is None else line.last
+        alone = line.partner_edges[evidence.lines[partner]]
+        few = 4 if line.edges == 0 else PARTNER_EDGES
+        if alone >= few or travel_after(evidence, since) > STUCK_TURNS:
+            stuck.append(_stuck_at(evidence.lines[role], since, line.level_at_start ^ (line.edges & 1)))
+    return stuck
+
+
+def _fold_stuck(evidence: Evidence, found: Docket, stuck: list[Anomalies]) -> None:
+    roles = {line: role for role, line in evidence.lines.items()}
+    for one in stuck:
+        role, since = roles[one.line or ""], int(one.times[0])
+        if role in ("a", "b"):
+            found.withdraw(OF_COUNT, from_on(since))
+            found.withdraw(("offset_step", "position_stale"), from_on(since))
+            found.withdraw(("residual_high", "latency_high", "scale_wrong", "direction_opposed"))
+        elif role == "index":
+            found.withdraw(("index_missing",))
+        elif role == "data":
+            found.withdraw(OF_BITS, from_on(_first_frame_from(evidence, since)))
+        else:
+            found.withdraw(OF_SERIAL, from_on(since))
+        found.withdraw(("pair_mismatch",), of_line(one.line))
+
+
+def _first_frame_from(evidence: Evidence, tick: int) -> int:
+    """First clock edge of the frame in which `tick` lies."""
+    assert evidence.serial is not None
+    edges = evidence.serial.frames.first_edge
+    at = int(np.searchsorted(edges, tick, side="right")) - 1
+    return tick if at < 0 else int(edges[at])
+
+
+def _fold_pairs(evidence: Evidence, found: Docket) -> None:
+    """What is read from a line while its pair is broken follows from that."""
+    roles = {line: role for role, line in evidence.lines.items()}
+    for pair in found.of("pair_mismatch"):
+        role = roles[pair.line or ""]
+        kinds = OF_SERIAL if role in ("clock", "data") else (*OF_COUNT, "offset_step")
+        for start, length in zip(pair.times, pair.evidence["duration_ticks"], strict=True):
+            begin = _first_frame_from(evidence, int(start)) if role in ("clock", "data") else int(start)
+            stop = int(start) + int(length)
+            found.withdraw(kinds, within(begin, stop))
+
+
+# ---- counts -------------------------------------------------------------------------------------------------------
+
+
+def _fold_illegal(evidence: Evidence, found: Docket, illegal: IntArray) -> None:
+    serial = evidence.serial
+    frame = int(serial.cadence.period or 0) if serial is not None else 0
+    cycle = int(evidence.incremental.mean_cycle_ticks or 0) if evidence.incremental is not None else 0
+    found.withdraw(("offset_step",), near(illegal, 8 * frame + cycle))
+    found.withdraw(("edge_too_close", "glitch"), near(illegal, cycle))
+
+    def miscounted(one: Anomalies) -> np.ndarray[tuple[int, ...], np.dtype[np.bool_]]:
+        start, stop = (np.asarray(one.evidence[name], np.int64) for name in ("start_ticks", "stop_ticks"))
+        inside = (illegal[None, :] >= start[:, None]) & (illegal[None, :] <= stop[:, None])
+        return np.asarray(inside.any(axis=1), np.bool_)
+
+    found.withdraw(("turn_count_wrong",), miscounted)
+
+
+def _fold_turns(found: Docket) -> None:
+    """The index shows that the count, not the serial position, went wrong in a turn."""
+    for turn in found.of("turn_count_wrong"):
+        if turn.evidence.get("every_turn"):
+            found.withdraw(("scale_wrong", "residual_high", "offset_step"))
+            continue
+        for start, stop in zip(turn.evidence["start_ticks"], turn.evidence["stop_ticks"], strict=True):
+            slack = (int(stop) - int(start)) // 8
+            found.withdraw(("offset_step",), within(int(start) - slack, int(stop) + slack))
+    if found.has("turn_count_wrong"):
+        found.withdraw(("scale_wrong",))
+
+
+def _index_state(evidence: Evidence, found: Docket) -> None:
+    """One finding where the index is high in other A/B states than the sheet says."""
+    result = evidence.incremental
+    assert result is not None
+    if result.index_state_fits is False and result.index is not None and result.index.rise_ticks.size:
+        cause = f"the index is high at {result.index_state_seen}, the sheet says {result.index_state_expected}"
+        found.add(
+            Anomalies(
+                "index_misplaced",
+                result.index.rise_ticks[:1],
+                line=evidence.lines.get("index"),
+                causes=[cause],
+                evidence={"state_seen": [result.index_state_seen], "state_expected": [result.index_state_expected]},
+            )
+        )
+
+
+# ---- agreement ----------------------------------------------------------------------------------------------------
+
+
+def _agreement(evidence: Evidence, measurements: list[Measurement], found: Docket) -> None:
+    agreement, serial = evidence.agreement, evidence.serial
+    if agreement is None or serial is None or agreement.direction is None:
+        return
+    start = serial.frames.first_edge[:1]
+    if len(agreement.steps):
+        found.add(
+            Anomalies(
+                "offset_step",
+                agreement.steps.time,
+                agreement.steps.after,
+                evidence={"counts": np.round(agreement.steps.counts, 3), "uncertainty": agreement.steps.uncertainty},
+            )
+        )
+    if agreement.direction_opposed:
+        expected = evidence.sheet.incremental.direction if evidence.sheet.incremental else 1
+        found.add(
+            Anomalies("direction_opposed", start, evidence={"direction": [agreement.direction], "sheet": [expected]})
+        )
+    if agreement.scale_wrong:
+        found.add(
+            Anomalies(
+                "scale_wrong",
+                start,
+                evidence={"counts_per_serial_turn": [agreement.counts_per_turn], "sheet": [evidence.counts_per_turn()]},
+            )
+        )
+    failed = {one.name: one for one in measurements if one.verdict == "fail"}
+    if "latency_s" in failed:
+        found.add(Anomalies("latency_high", start, evidence={"latency_s": [agreement.latency_s]}))
+    if "residual_deg" in failed and agreement.residual_deg is not None:
+        used = np.abs(np.nan_to_num(agreement.residual_deg))
+        used[agreement.outliers] = 0
+        peak = int(np.argmax(used))
+        found.add(
+            Anomalies(
+                "residual_high",
+                serial.frames.first_edge[[peak]],
+                np.array([peak], np.int64),
+                evidence={"residual_deg": [round(float(agreement.residual_deg[peak]), 6)]},
+            )
+        )
