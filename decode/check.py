@@ -16,15 +16,17 @@ import pandas as pd
 
 from decode.agreement.fit import Agreement, agree
 from decode.agreement.latch import Joined, LatchJoin
+from decode.agreement.silence import silent_channels
 from decode.capture.source import Capture, open_capture
 from decode.errors import InputError
 from decode.incremental.decoder import QuadratureDecoder
 from decode.incremental.quadrature import Counts
 from decode.incremental.result import IncrementalResult
 from decode.judgement.evidence import CaptureFacts, Evidence, SerialFacts, modulus, positions_per_turn
+from decode.judgement.faults import SAMPLES_NEEDED
 from decode.judgement.judge import judge
 from decode.judgement.records import Report
-from decode.lines.activity import Activity
+from decode.lines.activity import Activity, LineActivity
 from decode.lines.pairs import PairCombiner, default_skew
 from decode.report.columns import angles_table, frames_table
 from decode.serial.continuity import absorbed, cadence, jumped_alone, stood_still, with_breaks
@@ -188,9 +190,12 @@ class _Bench:
         incremental = None if self._decoder is None else self._decoder.finish()
         pair_anomalies = self._pairs.finish()
         frames = joined = agreement = serial = None
+        activity = self._activity.result()
         if self._receiver is not None and self._sheet.serial is not None:
             frames = Frames.concatenate([Frames.none(self._sheet.serial), *self._parts.frames])
-            joined = _together(self._parts.joined) if self._parts.joined else None
+        silent = self._silent(frames, activity)
+        if frames is not None:
+            joined = _together(self._parts.joined, silent) if self._parts.joined else None
             serial, agreement = self._continued(frames, joined, incremental)
         capture = self._capture
         return Evidence(
@@ -208,13 +213,22 @@ class _Bench:
                 notes=list(capture.notes),
                 anomalies=list(capture.anomalies),
             ),
-            activity=self._activity.result(),
+            activity=activity,
             pair_anomalies=pair_anomalies,
             serial=serial,
+            silent=silent,
             incremental=incremental,
             agreement=agreement,
             joined=joined,
         )
+
+    def _silent(self, frames: Frames | None, activity: dict[str, LineActivity]) -> dict[str, int]:
+        if self._decoder is None or any(one.kind == "time_reversal" for one in self._capture.anomalies):
+            return {}
+        sheet = self._sheet.serial
+        told = frames if sheet is not None and sheet.position_bits else None
+        per_turn, word = (1, 1) if sheet is None else (positions_per_turn(sheet), modulus(sheet))
+        return silent_channels(self._lines, activity, self._capture.first, told, per_turn, word)
 
     def _continued(
         self, frames: Frames, joined: Joined | None, incremental: IncrementalResult | None
@@ -223,6 +237,8 @@ class _Bench:
         sheet, receiver = self._sheet.serial, self._receiver
         assert sheet is not None and receiver is not None
         tick = float(self._capture.tick)
+        if receiver.rhythm is not None and receiver.rhythm.period < SAMPLES_NEEDED * max(1, self._capture.grid):
+            frames = frames.without("setup_violation", "clock_glitch")
         stated = None if sheet.frame_rate_hz is None else 1 / (sheet.frame_rate_hz * tick)
         rhythm = cadence(frames, stated)
         turn = self._counts_per_turn(incremental)
@@ -273,12 +289,17 @@ def _count_step(position_bits: int, turn: int | None) -> float:
     return 0.0 if turn is None else (1 << position_bits) / turn
 
 
-def _together(parts: list[Joined]) -> Joined:
+def _together(parts: list[Joined], silent: dict[str, int]) -> Joined:
+    """All of them; the count is not known from where a channel fell silent."""
+
     def column(name: str) -> FloatArray:
         return np.concatenate([getattr(part, name) for part in parts])
 
     latches = np.concatenate([part.latches for part in parts])
-    return Joined(latches, column("counted"), column("speed"), column("uncertainty"))
+    counted, speed = column("counted"), column("speed")
+    if silent:
+        counted[latches >= min(silent.values())] = np.nan
+    return Joined(latches, counted, speed, column("uncertainty"))
 
 
 def _with_outliers(frames: Frames, agreement: Agreement) -> Frames:

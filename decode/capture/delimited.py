@@ -20,7 +20,7 @@ import numpy as np
 import pandas as pd
 import pyarrow as pa
 
-from decode.anomalies import Anomalies
+from decode.anomalies import Anomalies, Severity
 from decode.capture.breaks import Break, BreakFinder
 from decode.capture.dialect import Dialect, read_dialect
 from decode.capture.levels import LevelError, LevelReader
@@ -155,8 +155,7 @@ class DelimitedCapture:
 
     @property
     def grid(self) -> int:
-        counted = self._dialect.time is None or self._dialect.counted
-        return 1 if counted else self._tally.grid or self._dialect.scale.printed
+        return 1 if self._dialect.counted else self._tally.grid or self._dialect.grid
 
     @property
     def notes(self) -> list[str]:
@@ -178,15 +177,16 @@ class DelimitedCapture:
 
     @property
     def anomalies(self) -> list[Anomalies]:
-        breaks = self._tally.breaks
-        groups = (
-            ("time_reversal", "back_s", None, [place for place in breaks if place.kind == "time_reversal"]),
-            ("time_gap", "gap_s", None, [p for p in breaks if p.kind == "time_gap" and p.changed != 1]),
-            ("time_gap", "gap_s", "note", [p for p in breaks if p.kind == "time_gap" and p.changed == 1]),
+        reversals = [place for place in self._tally.breaks if place.kind == "time_reversal"]
+        gaps = [place for place in self._tally.breaks if place.kind == "time_gap"]
+        found = (
+            self._anomalies("time_reversal", "back_s", None, reversals),
+            self._anomalies("time_gap", "gap_s", None, [gap for gap in gaps if gap.changed != 1]),
+            self._anomalies("time_gap", "gap_s", "note", [gap for gap in gaps if gap.changed == 1]),
         )
-        return [self._anomalies(*group) for group in groups if group[-1]]
+        return [anomalies for anomalies in found if len(anomalies)]
 
-    def _anomalies(self, kind: str, length: str, severity: str | None, places: list[_Place]) -> Anomalies:
+    def _anomalies(self, kind: str, length: str, severity: Severity | None, places: list[_Place]) -> Anomalies:
         return Anomalies(
             kind,
             np.array([place.time for place in places], np.int64),

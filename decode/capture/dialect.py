@@ -20,9 +20,12 @@ from fractions import Fraction
 from itertools import pairwise
 from pathlib import Path
 
+import numpy as np
+import pyarrow as pa
+
 from decode.capture.levels import UNKNOWN_TEXTS, is_level
 from decode.capture.text import Shape, open_file, refuse_binary
-from decode.capture.time_axis import UNIT_DIGITS, Scale, choose_scale, maybe_decimal
+from decode.capture.time_axis import UNIT_DIGITS, Scale, choose_scale, maybe_decimal, to_ticks
 from decode.errors import InputError
 from decode.sheet import CaptureKeys
 
@@ -53,7 +56,8 @@ class Dialect:
 
     names: of all columns, the time column included. time: its index, or None where the row's number is the time.
     scale: how its text becomes ticks. tick: seconds per tick. signals: indexes of the other columns. layout: one
-    line for people. notes: what was inferred. counted: the time column holds sample numbers. decimal: decimal mark.
+    line for people. notes: what was inferred. counted: times are sample numbers. decimal: decimal mark. grid: the
+    greatest common divisor of the first rows' time differences, ticks.
     """
 
     shape: Shape
@@ -66,6 +70,7 @@ class Dialect:
     notes: tuple[str, ...]
     counted: bool
     decimal: str
+    grid: int
 
 
 @dataclass(frozen=True, slots=True)
@@ -118,13 +123,24 @@ def read_dialect(path: Path, keys: CaptureKeys) -> Dialect:
     else:
         scale, tick, unit, said = _time_axis(table, time, keys, file)
         notes += said
-    counted = time is not None and not unit
     if keys.threshold_v is not None:
         low, high = keys.threshold_v
         notes.append(f"voltages: low at or below {low:g} V, high at or above {high:g} V, in between as before")
     every_sample = time is None or _is_every_sample(table, time, signals)
     layout = _layout(table, time, unit, every_sample, keys)
-    return Dialect(table.shape, table.names, time, scale, tick, signals, layout, tuple(notes), counted, table.decimal)
+    return Dialect(
+        shape=table.shape,
+        names=table.names,
+        time=time,
+        scale=scale,
+        tick=tick,
+        signals=signals,
+        layout=layout,
+        notes=tuple(notes),
+        counted=not unit,
+        decimal=table.decimal,
+        grid=_grid(table.column(time), scale) if time is not None and unit else 1,
+    )
 
 
 # --- rows ------------------------------------------------------------------------------------------------------------
@@ -281,7 +297,7 @@ def _maybe_time_column(table: _Table, keys: CaptureKeys) -> int | None:
     """By its name; else by a unit of time in its name; else the first column, where its numbers rise."""
     if table.header is not None:
         for index, name in enumerate(table.names):
-            if _TIME_NAME.match(name) and not _is_line_named_t(table, index, keys):
+            if _TIME_NAME.match(_UNIT.sub("", name)) and not _is_line_named_t(table, index, keys):
                 return index
         for index, name in enumerate(table.names):
             if _maybe_unit(name) and table.numbers(index) is not None and not _all_levels(table, index):
@@ -349,6 +365,12 @@ def _time_axis(table: _Table, time: int, keys: CaptureKeys, file: str) -> tuple[
         notes.append(f"the unit of time is taken to be s: column {name!r} has decimals and names no unit")
     scale = choose_scale(table.column(time), unit, table.decimal)
     return scale, scale.tick, unit, notes
+
+
+def _grid(texts: Sequence[str], scale: Scale) -> int:
+    ticks, _ = to_ticks(pa.array(texts, pa.string()), scale)
+    steps = np.diff(ticks)
+    return int(np.gcd.reduce(steps[steps > 0], initial=0)) or scale.printed
 
 
 def _rate_axis(keys: CaptureKeys, table: _Table, file: str) -> Scale:

@@ -26,9 +26,9 @@ class Capture(Protocol):
     columns; without a header "1", "2", ... by their place among all columns of the file. tick: seconds per tick.
 
     Complete once the spans are exhausted: rows; first and last (the earliest and the latest time, ticks); grid (the
-    greatest common divisor of the time differences, ticks: the sampling resolution; 1 for numbered samples); notes
-    (everything inferred, skipped or not used); anomalies (breaks of the time axis); digest (SHA-256 of the file's
-    bytes, hex).
+    greatest common divisor of the time differences, ticks: the sampling resolution; 1 for numbered samples; before
+    the first span, that of the first rows); notes (everything inferred, skipped or not used); anomalies (breaks of
+    the time axis); digest (SHA-256 of the file's bytes, hex).
     """
 
     file: str

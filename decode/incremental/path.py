@@ -171,7 +171,7 @@ class Path:
         if kept.size:
             self._trace.append(Trace(times[kept], place[kept], stretch[kept]))
         self._count, self._stretch = int(counts[-1]), int(stretch[-1])
-        return _Way(times, place, self._step[:ready], self._after[:ready], counts, stretch)
+        return _Way(times, place, np.sign(moved).astype(np.int8), self._after[:ready], counts, stretch)
 
     def _place_index(self, way: _Way, last: bool) -> None:
         """Index edges before the end of `way`, or all that wait where no more steps come."""
@@ -193,7 +193,7 @@ class Path:
                 before,
                 edges.levels[:ready],
                 way.place[row] + share * (way.place[after] - way.place[row]),
-                way.step[row],
+                way.step[np.where(share > 0.5, after, row)],
                 way.state[row],
                 way.counts[row],
                 lasts,

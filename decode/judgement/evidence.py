@@ -4,8 +4,6 @@ from __future__ import annotations
 
 from dataclasses import dataclass, field
 
-import numpy as np
-
 from decode.agreement.fit import Agreement
 from decode.agreement.latch import Joined
 from decode.anomalies import Anomalies
@@ -55,7 +53,8 @@ class SerialFacts:
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Evidence:
-    """One capture of one board. lines: column by role. joined: the count at each frame's latch."""
+    """One capture of one board. lines: column by role. silent: tick from which a channel is silent, by its role.
+    joined: the count at each frame's latch."""
 
     sheet: Sheet
     lines: dict[str, str]
@@ -64,6 +63,7 @@ class Evidence:
     pair_anomalies: list[Anomalies] = field(default_factory=list)
     serial: SerialFacts | None = None
     incremental: IncrementalResult | None = None
+    silent: dict[str, int] = field(default_factory=dict)
     agreement: Agreement | None = None
     joined: Joined | None = None
 
@@ -81,13 +81,3 @@ def positions_per_turn(serial: Serial) -> int:
 def modulus(serial: Serial) -> int:
     """Positions after which the word of turns and position begins again."""
     return 1 << (serial.position_bits + serial.turns_bits)
-
-
-def travel_after(evidence: Evidence, tick: int) -> float:
-    """How far the serial position went after `tick`, in turns; 0 without one."""
-    if evidence.serial is None or evidence.sheet.serial is None or evidence.sheet.serial.position_bits == 0:
-        return 0.0
-    frames, word = evidence.serial.frames, modulus(evidence.sheet.serial)
-    rows = np.flatnonzero(frames.usable & (frames.latch >= tick))
-    steps = (np.diff(frames.position[rows]) + word // 2) % word - word // 2
-    return float(np.abs(steps).sum() / positions_per_turn(evidence.sheet.serial))

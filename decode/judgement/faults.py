@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 
 from decode.anomalies import Anomalies
-from decode.judgement.evidence import Evidence, modulus, travel_after
+from decode.judgement.evidence import Evidence, modulus
 from decode.judgement.folding import (
     OF_BITS,
     OF_COUNT,
@@ -28,12 +28,6 @@ SAMPLES_NEEDED = 4
 
 STUCK_FRAMES = 10
 """A data line that is stuck for the last so many frames counts as stuck for good."""
-
-PARTNER_EDGES = 64
-"""Edges of the other channel without one of this channel, to the capture's end, that make it stuck."""
-
-STUCK_TURNS = 1 / 16
-"""Serial travel without an A or B edge, to the capture's end, that makes the line stuck, in turns."""
 
 
 def docket(evidence: Evidence, measurements: list[Measurement]) -> Docket:
@@ -169,16 +163,10 @@ def _stuck_serial(evidence: Evidence) -> list[Anomalies]:
 
 
 def _stuck_channels(evidence: Evidence) -> list[Anomalies]:
-    if evidence.incremental is None:
-        return []
     stuck = []
-    for role, partner in (("a", "b"), ("b", "a")):
+    for role, since in evidence.silent.items():
         line = evidence.activity[evidence.lines[role]]
-        since = evidence.capture.first if line.last is None else line.last
-        alone = line.partner_edges[evidence.lines[partner]]
-        few = 4 if line.edges == 0 else PARTNER_EDGES
-        if alone >= few or travel_after(evidence, since) > STUCK_TURNS:
-            stuck.append(_stuck_at(evidence.lines[role], since, line.level_at_start ^ (line.edges & 1)))
+        stuck.append(_stuck_at(evidence.lines[role], since, line.level_at_start ^ (line.edges & 1)))
     return stuck
 
 

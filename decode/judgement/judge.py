@@ -11,7 +11,7 @@ from decode.judgement.evidence import Evidence
 from decode.judgement.faults import docket, too_coarse
 from decode.judgement.findings import findings_of
 from decode.judgement.folding import Docket
-from decode.judgement.measuring import measurements, turns_counted
+from decode.judgement.measuring import expanded, measurements, turns_counted
 from decode.judgement.records import (
     AgreementRecord,
     CaptureRecord,
@@ -129,7 +129,9 @@ def _agreement(evidence: Evidence) -> AgreementRecord | None:
         counts_per_turn=agreement.counts_per_turn,
         offset_counts=agreement.offset_counts,
         latency_s=agreement.latency_s,
-        latency_uncertainty_s=agreement.latency_uncertainty_s,
+        latency_uncertainty_s=None
+        if agreement.latency_s is None
+        else expanded(agreement.latency_uncertainty_s, evidence.capture.step_s),
         latency_note=agreement.reasons.get("latency_s"),
         residual_rms_deg=agreement.residual_rms_deg,
         residual_peak_deg=agreement.residual_peak_deg,

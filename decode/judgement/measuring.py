@@ -20,6 +20,9 @@ from decode.judgement.records import Limit, Measurement
 from decode.spans import FloatArray, IntArray
 
 TOO_COARSE = "too few samples per period or state"
+COVERAGE = 3.0
+"""Standard uncertainties of a fit that its stated uncertainty covers (JCGM 100:2008, 6.2, from memory)."""
+
 _SERIAL_TIMES = (
     ("clock_high_s", "clock"),
     ("clock_low_s", "clock"),
@@ -58,6 +61,11 @@ def _scale(evidence: Evidence) -> Scale:
         if turn is not None and serial.position_bits:
             coarser = 360.0 / min(turn, positions_per_turn(serial))
     return Scale(clock, stated, turn, coarser)
+
+
+def expanded(standard: float | None, step: float = 0.0) -> float:
+    """The uncertainty stated for a fitted figure: its coverage, and at least the sampling step."""
+    return max(COVERAGE * (standard or 0.0), step)
 
 
 def _ones(values: FloatArray | IntArray) -> tuple[FloatArray, IntArray]:
@@ -260,7 +268,7 @@ def _agreement(evidence: Evidence, limits: dict[str, Limit]) -> Iterator[Measure
             "latency_s",
             agreement.latency_s,
             n=agreement.frames_used,
-            uncertainty=2 * (agreement.latency_uncertainty_s or 0.0),
+            uncertainty=expanded(agreement.latency_uncertainty_s, evidence.capture.step_s),
             limit=limits.get("latency_s"),
         )
     if agreement.scale_error is None:
@@ -270,7 +278,7 @@ def _agreement(evidence: Evidence, limits: dict[str, Limit]) -> Iterator[Measure
             "scale_error",
             agreement.scale_error,
             n=agreement.frames_used,
-            uncertainty=2 * (agreement.scale_error_uncertainty or 0.0),
+            uncertainty=expanded(agreement.scale_error_uncertainty),
             limit=limits.get("scale_error"),
         )
     if agreement.angle_error is None:
@@ -282,7 +290,7 @@ def _agreement(evidence: Evidence, limits: dict[str, Limit]) -> Iterator[Measure
             None,
             *_ones(error.error_deg),
             limit=limits.get("angle_error_deg"),
-            uncertainty=2 * float(error.uncertainty_deg[error.largest]),
+            uncertainty=expanded(float(error.uncertainty_deg[error.largest])),
         )
     if agreement.jitter_deg is None:
         yield absent("angle_jitter_deg", "angle_error")

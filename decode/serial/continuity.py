@@ -201,10 +201,13 @@ def with_breaks(frames: Frames, serial: Serial, rhythm: Cadence) -> Frames:
 
 
 def absorbed(frames: Frames) -> Frames:
-    """The table with the frame on either side of a stretch of stuck data counted to it, where it too is spoilt.
+    """The table with all of a stretch of stuck data told as such.
 
-    A line seldom stops or comes back between two frames.
+    A word whose data line did not move and that does not fit its neighbours was never sent. A line seldom stops or
+    comes back between two frames, so the spoilt frame on either side of the stretch counts to it.
     """
+    unsent = frames.quiet & frames.is_any("position_jump", "position_stale")
+    frames = replace(frames, kind=np.where(unsent, np.int8(CODE["data_stuck"]), frames.kind))
     stuck = frames.is_any("data_stuck")
     spoilt = frames.is_any(*SPOILT_BY_STUCK_DATA)
     beside = spoilt & (np.concatenate([[False], stuck[:-1]]) | np.concatenate([stuck[1:], [False]]))

@@ -50,7 +50,8 @@ class Frames:
     where the capture is broken between two frames. least_setup: (n,) shortest setup time or -1.
     pause: (n,) ticks since the last clock edge before, or -1. glitch_time: (n,) tick of a short clock pulse or -1.
     gap: (n,) ticks of a pause inside the burst, 0 for none. wrong: (n,) which field fails (number in the sheet's
-    list), or -1. warned: (n,) whether the warning bit is set.
+    list), or -1. warned: (n,) whether the warning bit is set. quiet: (n,) no edge of data in
+    the burst and the pause after it.
     """
 
     first_edge: IntArray
@@ -69,6 +70,7 @@ class Frames:
     gap: IntArray
     wrong: IntArray
     warned: BoolArray
+    quiet: BoolArray
     fields: dict[str, Values] = field(default_factory=dict)
 
     def __len__(self) -> int:
@@ -80,7 +82,7 @@ class Frames:
         word = words(np.empty((0, serial.sent_bits), np.uint8), serial)
         whole, flag, code = np.empty(0, np.int64), np.empty(0, np.bool_), np.empty(0, np.int8)
         plain: dict[str, Any] = {column.name: whole for column in fields(cls) if column.name != "fields"}
-        plain |= {"raw": word.raw, "usable": flag, "warned": flag, "crc_ok": code, "kind": code}
+        plain |= {"raw": word.raw, "usable": flag, "warned": flag, "quiet": flag, "crc_ok": code, "kind": code}
         extra = ("cds", "cdm", "acknowledge_clocks") if serial.interface == "biss-c" else ()
         return cls(**plain, fields=word.fields | {name: np.empty(0, np.uint64) for name in extra})
 
@@ -103,6 +105,10 @@ class Frames:
         """The rows of `which` that have no kind yet get this one."""
         fresh = which & (self.kind == 0)
         return replace(self, kind=np.where(fresh, np.int8(CODE[name]), self.kind))
+
+    def without(self, *names: str) -> Self:
+        """The table with these kinds forgotten."""
+        return replace(self, kind=np.where(self.is_any(*names), np.int8(0), self.kind))
 
     def is_any(self, *names: str) -> BoolArray:
         """(n,) whether a frame has one of these kinds ("" for none)."""

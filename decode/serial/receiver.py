@@ -212,6 +212,7 @@ class Receiver:
             gap=bursts.gap,
             wrong=word.wrong,
             warned=word.failed["warning_flag"] & reading.complete,
+            quiet=np.searchsorted(self._data.times, bursts.opens) == np.searchsorted(self._data.times, stops),
             fields=word.fields | reading.columns,
         )
         return self._blame(frames, reading, word, samples, stops, rhythm, habit).take(whole)
@@ -268,8 +269,7 @@ class Receiver:
     ) -> Frames:
         """Give each faulty frame its most telling kind: causes before what follows from them."""
         complete, interface = reading.complete, self.serial.interface
-        edges_by = np.searchsorted(self._data.times, np.stack([reading.bursts.opens, stops]))
-        quiet = edges_by[0] == edges_by[1]
+        quiet = frames.quiet
         at_start = self._data.levels_before(np.searchsorted(self._data.times, frames.first_edge))
         failing = np.any([word.failed[name] for name in CHECKS], axis=0)
         flagged = word.failed["error_flag"]

@@ -52,6 +52,12 @@ def table(header: str, delimiter: str, time: str = "{}", end: str = "\n", cell: 
     [
         (table("Time [ns],A,B", ","), NONE, AB, "comma-separated, header, time in ns, a row per change"),
         (table("Time(ns);A;B", ";"), NONE, AB, "semicolon-separated, header, time in ns, a row per change"),
+        (
+            "time_ns,A\n0,0\n1,1\n",
+            NONE,
+            {"A": (0, [(1_000, 1)])},
+            "comma-separated, header, time in ns, a row per change",
+        ),
         (table("t_ns\tA\tB", "\t"), NONE, AB, "tab-separated, header, time in ns, a row per change"),
         (table("Time [ns]  A  B", "  "), NONE, AB, "space-separated, header, time in ns, a row per change"),
         (table("Zeit [ns], A, B", ", "), NONE, AB, "comma-separated, header, time in ns, a row per change"),
@@ -159,6 +165,7 @@ def test_what_is_known_at_the_end(tmp_path: Path) -> None:
     """Rows at -10, 0, 25 and 45 ns: differences 10, 25 and 20 ns have the divisor 5 ns; the digest is of the bytes."""
     content = "Time [s],A\n-0.000000010,0\n0.000000000,1\n0.000000025,0\n0.000000045,1\n"
     capture = opened(tmp_path, content)
+    assert capture.grid == 5_000
     edges = whole(capture)["A"]
     assert edges.times.tolist() == [0, 25_000, 45_000]
     assert (capture.tick, capture.grid, capture.rows) == (PICOSECOND, 5_000, 4)
