@@ -31,7 +31,7 @@ if TYPE_CHECKING:
 
     from decode.bench.motion import Motion
     from decode.bench.scenario import Fault
-    from decode.check import Checked
+    from decode.pipeline import Checked
     from decode.judgement.records import Report
 
 PASS, FAIL, USAGE, UNDECIDED, BUG, INTERRUPTED, PIPE_CLOSED = 0, 1, InputError.exit_code, 3, 70, 130, 141
@@ -187,7 +187,7 @@ def check(
     _expect_apart(targets, [capture, str(chosen)])
 
     with _showing_progress() as progress:
-        from decode.check import check as run
+        from decode.pipeline import check as run
 
         checked = run(capture, chosen, progress=progress, command=context.obj)
     report = checked.report if sheet is not None else _with_note(checked.report, chosen)
@@ -389,7 +389,7 @@ def demo(context: typer.Context, width: _Width = None) -> int:
     console = _console(width)
     for number, capture in enumerate(captures, 1):
         with _showing_progress() as progress:
-            from decode.check import check as run
+            from decode.pipeline import check as run
 
             checked = run(str(capture), expect_sheet_beside(capture), progress=progress, command=context.obj)
         print(f"Demo capture {number} of {len(captures)}\n")

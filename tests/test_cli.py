@@ -49,9 +49,9 @@ class Standin:
 @pytest.fixture
 def pipeline(monkeypatch: pytest.MonkeyPatch) -> Standin:
     standin = Standin(samples.GOOD)
-    module = ModuleType("decode.check")
+    module = ModuleType("decode.pipeline")
     module.check = standin.check  # type: ignore[attr-defined]
-    monkeypatch.setitem(sys.modules, "decode.check", module)
+    monkeypatch.setitem(sys.modules, "decode.pipeline", module)
     return standin
 
 

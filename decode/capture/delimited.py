@@ -78,6 +78,7 @@ class _Tally:
     """What reading found out so far."""
 
     rows: int = 0
+    bytes: int = 0
     first: int = 0
     last: int = 0
     grid: int = 0
@@ -144,6 +145,11 @@ class DelimitedCapture:
     @property
     def rows(self) -> int:
         return self._tally.rows
+
+    @property
+    def part_read(self) -> float:
+        """How much of the file the spans so far came from, 0 to 1."""
+        return min(1.0, self._tally.bytes / max(1, self._path.stat().st_size))
 
     @property
     def first(self) -> int:
@@ -249,6 +255,7 @@ class _Reading:
         yield from self._builder.last_span()
 
     def _count(self, block: Block) -> None:
+        self.tally.bytes += len(block.rows)
         self.tally.blank += block.blank
         self.tally.comments += block.comments
         if block.cut_short is not None:

@@ -25,6 +25,8 @@ class Capture(Protocol):
     file: its name as the user gave it. layout: one line that a user understands. columns: names of the signal
     columns; without a header "1", "2", ... by their place among all columns of the file. tick: seconds per tick.
 
+    part_read: how much of the file the spans so far came from, 0 to 1.
+
     Complete once the spans are exhausted: rows; first and last (the earliest and the latest time, ticks); grid (the
     greatest common divisor of the time differences, ticks: the sampling resolution; 1 for numbered samples; before
     the first span, that of the first rows); notes (everything inferred, skipped or not used); anomalies (breaks of
@@ -39,6 +41,8 @@ class Capture(Protocol):
 
     @property
     def rows(self) -> int: ...
+    @property
+    def part_read(self) -> float: ...
     @property
     def first(self) -> int: ...
     @property

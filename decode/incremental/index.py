@@ -39,6 +39,9 @@ SAME_WAY_COUNTS = 0.75
 OTHER_WAY_COUNTS = 1.25
 """How far two pulses may differ, beside the skew, passed one way or opposite ways (common practice: one count)."""
 
+SAME_STATE_COUNTS = 0.25
+"""Lost or invented cycles leave the index where it was within its state, so much at most beside (common practice)."""
+
 AGREEING_TURNS = 0.8
 """This share of the turns agrees in another number where the stated one is wrong (common practice, no source)."""
 
@@ -107,20 +110,18 @@ class IndexReading:
     """What the index line told.
 
     pulses: the table. partial: pulses that an end of the capture cuts. role: (n,) of each pulse "index", "extra",
-    "misplaced", or "" for one the shaft turned back in. turn: counts in a turn, None where not known. from_sheet:
-    turn is the sheet's. offset: (n,) counts from the pulse's expected place, NaN where none. turns: rows (start,
-    stop, direction, counts). widths: (m,) counts of the whole pulses at the index's place. anomalies: findings.
-    state_seen, state_expected: where the index is high, None where it cannot be told or is not stated.
+    "misplaced", or "" for one the shaft turned back in. turn: counts in a turn, None where not known. offset: (n,)
+    counts from the pulse's expected place, NaN where none. turns: rows (start, stop, direction, counts). anomalies:
+    findings. glitches: short pulses; narrow: short pulses that are the index. state_seen, state_expected: where the
+    index is high, None where it cannot be told or is not stated. state_fits: the first lies within the second.
     """
 
     pulses: Pulses
     partial: int
     role: list[str]
     turn: int | None
-    from_sheet: bool
     offset: FloatArray
     turns: list[tuple[int, int, int, int]]
-    widths: FloatArray
     anomalies: list[Anomalies] = field(default_factory=list)
     glitches: list[Glitch] = field(default_factory=list)
     narrow: list[Glitch] = field(default_factory=list)
@@ -228,10 +229,7 @@ def read_index(edges: IndexEdges, trace: Trace, rules: IndexRules) -> IndexReadi
     pulses, partial, glitches = pulses_of(edges, rules.shortest)
     turn, wrong = _turn_of(pulses, rules)
     size = pulses.rise.size
-    from_sheet = turn is not None and turn == rules.turn
-    reading = IndexReading(
-        pulses, partial, [""] * size, turn, from_sheet, np.full(size, np.nan), [], np.empty(0), glitches=glitches
-    )
+    reading = IndexReading(pulses, partial, [""] * size, turn, np.full(size, np.nan), [], glitches=glitches)
     if turn is not None:
         _Judge(reading, trace, rules, turn, wrong).run()
     else:
@@ -280,6 +278,8 @@ class _Judge:
         self.reading, self.trace, self.rules, self.turn = reading, trace, rules, turn
         pulses = reading.pulses
         self.place = pulses.middle
+        self.lower = np.minimum(pulses.rise_place, pulses.fall_place)
+        self.upper = np.maximum(pulses.rise_place, pulses.fall_place)
         self.way = pulses.rise_direction.astype(int)
         self.speed = 1 / np.maximum(pulses.lasts, 1)
         self.whole = [int(one) for one in np.flatnonzero(pulses.passed)]
@@ -298,15 +298,29 @@ class _Judge:
         self._fill_tables()
         self._report()
 
+    def _apart(self, one: int, reference: int) -> float:
+        """Counts from a pulse to another by middle, lower or upper edge, whichever is nearest to whole turns.
+
+        A pulse with one edge in its place is of the wrong width, not misplaced.
+        """
+        distances = [float(place[one] - place[reference]) for place in (self.place, self.lower, self.upper)]
+        return min(distances, key=lambda distance: abs(self._wrapped(distance)))
+
+    def _wrapped(self, distance: float) -> float:
+        half = self.turn / 2
+        return (distance + half) % self.turn - half
+
     def _off(self, one: int, reference: int) -> float:
         """Counts by which a pulse lies beside the place of another, modulo a turn."""
-        half = self.turn / 2
-        return (float(self.place[one] - self.place[reference]) + half) % self.turn - half
+        return self._wrapped(self._apart(one, reference))
+
+    def _skew(self, one: int, other: int) -> float:
+        """Counts that the index may be early or late at the faster of two passages."""
+        return min(self.rules.skew * max(float(self.speed[one]), float(self.speed[other])), 1.0)
 
     def _tolerance(self, one: int, other: int) -> float:
         same = self.way[one] == self.way[other]
-        skew = self.rules.skew * max(float(self.speed[one]), float(self.speed[other]))
-        return (SAME_WAY_COUNTS if same else OTHER_WAY_COUNTS) + min(skew, 1.0)
+        return (SAME_WAY_COUNTS if same else OTHER_WAY_COUNTS) + self._skew(one, other)
 
     def _close(self, one: int, reference: int) -> bool:
         return abs(self._off(one, reference)) <= self._tolerance(one, reference)
@@ -323,7 +337,9 @@ class _Judge:
         off = self._off(one, reference)
         if not self._another_pass(one, reference):
             return False
-        return abs(off) <= self.turn / 8 and abs(off - 4 * round(off / 4)) <= self._tolerance(one, reference)
+        return abs(off) <= self.turn / 8 and abs(off - 4 * round(off / 4)) <= SAME_STATE_COUNTS + self._skew(
+            one, reference
+        )
 
     def _sort(self) -> None:
         """Right pulses and outliers, and between which right pulses the place moved."""
@@ -462,7 +478,7 @@ class _Judge:
     def _fill_tables(self) -> None:
         reading, pulses = self.reading, self.reading.pulses
         for one, other in pairwise(self.right):
-            distance = float(self.place[other] - self.place[one]) * int(self.way[other])
+            distance = self._apart(other, one) * int(self.way[other])
             if self.way[one] == self.way[other] and self._joined(one, other) and round(distance / self.turn) == 1:
                 reading.turns.append(
                     (int(pulses.rise[one]), int(pulses.rise[other]), int(self.way[other]), round(distance))
@@ -475,7 +491,8 @@ class _Judge:
                 shifted = float(np.nan_to_num(reading.offset[moved[one]])) if one in moved else 0.0
                 reading.offset[one] = shifted
             elif reading.role[one] != "extra":
-                reading.offset[one] = self._off(one, base) + float(np.nan_to_num(reading.offset[base]))
+                beside = self._wrapped(float(self.place[one] - self.place[base]))
+                reading.offset[one] = beside + float(np.nan_to_num(reading.offset[base]))
 
     def _report(self) -> None:
         pulses, line = self.reading.pulses, self.rules.line
@@ -572,7 +589,6 @@ def _judge_widths(reading: IndexReading, rules: IndexRules) -> None:
     pulses = reading.pulses
     chosen = np.flatnonzero(pulses.passed & np.array([role == "index" for role in reading.role], np.bool_))
     width = pulses.width[chosen]
-    reading.widths = width
     if chosen.size == 0:
         return
     skew = np.minimum(2 * rules.skew / np.maximum(pulses.lasts[chosen], 1), 1.0)

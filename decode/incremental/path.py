@@ -22,9 +22,9 @@ class IndexEdges:
     """Edges of the index line with where the shaft was.
 
     times: (n,) ticks. before, level: (n,) level of the index before and after. place: (n,) counts. direction: (n,) of
-    the last A/B step. state: (n,) place in the cycle at that time, -1 unknown. count: (n,) count at that time. lasts:
-    (n,) ticks between the A/B edges around it, 0 where one is missing. stretch: (n,) see above. piece: (n,) number of
-    the joined part of the capture.
+    the nearest A/B step. state: (n,) place in the cycle at that time, -1 unknown. count: (n,) count at that time.
+    lasts: (n,) ticks between the A/B edges around it, 0 where one is missing. stretch: (n,) see above. piece: (n,)
+    number of the joined part of the capture.
     """
 
     times: IntArray

@@ -35,10 +35,9 @@ _CONTEXT = REACH + 2
 class Clusters:
     """Groups of edges on one line closer together than can be.
 
-    first, last: (n,) ticks of a group's first and last edge. shortest: (n,) ticks, its shortest interval. at: (n,) ticks at
-    which that begins.
-    toggles: (n,) edges in it. level: (n,) level after the first. quiet: (n,) ticks without an edge before it.
-    other: (n,) the other line has an edge inside.
+    first, last: (n,) ticks of a group's first and last edge. shortest: (n,) ticks, its shortest interval. at: (n,)
+    ticks at which that begins. toggles: (n,) edges in it. level: (n,) level after the first. quiet: (n,) ticks
+    without an edge before it.
     """
 
     first: IntArray
@@ -48,7 +47,6 @@ class Clusters:
     toggles: IntArray
     level: LevelArray
     quiet: IntArray
-    other: BoolArray
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -142,7 +140,7 @@ def _decide(line: _Line, other: IntArray, stop: int, last: bool) -> tuple[Edges,
     while limit > line.decided and state[limit] == _SHORT:
         limit -= 1
     limit = max(limit, line.decided)
-    return _hand_on(line, gaps, state, limit, other)
+    return _hand_on(line, gaps, state, limit)
 
 
 def _judge_alone(gaps: IntArray, which: IntArray, last: bool) -> LevelArray:
@@ -195,7 +193,7 @@ def _judge_open(gaps: IntArray, times: IntArray, other: IntArray) -> int:
     return _OPEN if alone or regular else _LONG
 
 
-def _hand_on(line: _Line, gaps: IntArray, state: LevelArray, limit: int, other: IntArray) -> tuple[Edges, Clusters]:
+def _hand_on(line: _Line, gaps: IntArray, state: LevelArray, limit: int) -> tuple[Edges, Clusters]:
     """Edges up to `limit` leave the line, groups of short intervals among them reduced to nothing or to one edge."""
     short = np.flatnonzero(state[: limit + 1] == _SHORT)
     short = short[short > line.decided]
@@ -207,20 +205,18 @@ def _hand_on(line: _Line, gaps: IntArray, state: LevelArray, limit: int, other: 
         toggles = closing - opening + 1
         keep[short] = False
         keep[opening[toggles % 2 == 0]] = False
-        begin, end = line.times[opening], line.times[closing]
         shortest = np.minimum.reduceat(gaps[short], first)
         size = np.diff(first, append=short.size)
         found = np.flatnonzero(gaps[short] == np.repeat(shortest, size))
         at = found[np.searchsorted(found, first)]
         clusters = Clusters(
-            begin,
-            end,
+            line.times[opening],
+            line.times[closing],
             shortest,
             line.times[short[at] - 1],
             toggles,
             line.levels[opening],
             gaps[opening],
-            np.searchsorted(other, end, "right") > np.searchsorted(other, begin, "left"),
         )
     keep[: line.decided] = False
     clean = Edges(line.clean_level, line.times[:limit][keep], line.levels[:limit][keep])
@@ -231,4 +227,4 @@ def _hand_on(line: _Line, gaps: IntArray, state: LevelArray, limit: int, other: 
 
 def _no_clusters() -> Clusters:
     none = np.empty(0, np.int64)
-    return Clusters(none, none, none, none, none, np.empty(0, np.int8), none, np.empty(0, np.bool_))
+    return Clusters(none, none, none, none, none, np.empty(0, np.int8), none)

@@ -147,6 +147,8 @@ def _stuck_serial(evidence: Evidence) -> list[Anomalies]:
         return [_stuck_at(select, start, evidence.activity[select].level_at_start)]
     if data.edges == 0:
         return [_stuck_at(lines["data"], start, data.level_at_start)]
+    if any(one.kind == "time_reversal" for one in evidence.capture.anomalies):
+        return []  # the last edge of a line is not its latest
     period = evidence.serial.cadence.period
     assert clock.last is not None
     if (

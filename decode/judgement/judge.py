@@ -7,7 +7,7 @@ import numpy as np
 
 from decode.anomalies import Anomalies
 from decode.judgement.assessment import upper_bound_95
-from decode.judgement.evidence import Evidence
+from decode.judgement.evidence import Evidence, modulus, positions_per_turn
 from decode.judgement.faults import docket, too_coarse
 from decode.judgement.findings import findings_of
 from decode.judgement.folding import Docket
@@ -127,7 +127,7 @@ def _agreement(evidence: Evidence) -> AgreementRecord | None:
         frames_used=agreement.frames_used,
         direction=agreement.direction,
         counts_per_turn=agreement.counts_per_turn,
-        offset_counts=agreement.offset_counts,
+        offset_counts=_offset(evidence),
         latency_s=agreement.latency_s,
         latency_uncertainty_s=None
         if agreement.latency_s is None
@@ -140,6 +140,18 @@ def _agreement(evidence: Evidence) -> AgreementRecord | None:
             for time, counts in zip(agreement.steps.time, agreement.steps.counts, strict=True)
         ],
     )
+
+
+def _offset(evidence: Evidence) -> float | None:
+    """The offset, brought to within half of what the serial word can say: further away is the same word again."""
+    agreement, serial = evidence.agreement, evidence.sheet.serial
+    if agreement is None or serial is None or agreement.offset_counts is None:
+        return None
+    turn = agreement.counts_per_turn or evidence.counts_per_turn()
+    if turn is None:
+        return agreement.offset_counts
+    span = turn * (modulus(serial) // positions_per_turn(serial))
+    return (agreement.offset_counts + span / 2) % span - span / 2
 
 
 def _next(evidence: Evidence, measured: list[Measurement], found: list[Finding]) -> list[str]:

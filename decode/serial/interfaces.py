@@ -62,7 +62,8 @@ class Reading:
     bursts: the n bursts, without clock edges that are none of the word's.
     drive, sample: (n, m) ticks at which bit m is driven and sampled, -1 where it is not. levels: (n, m) data level at
     each sample. bits: (n, sent_bits), 0 where not read. complete: (n,) whether every bit of the word was read.
-    acknowledged, started: (n,) as far as the interface has such a thing. clocks, latch, trailing, stop: (n,).
+    acknowledged, started: (n,) as far as the interface has such a thing. clocks, latch, trailing: (n,). stop: (n,)
+    level of the bit after the word. over: (n,) tick at which that bit was sampled, or the last clock edge.
     columns: further columns for the frame table.
     """
 
@@ -78,6 +79,7 @@ class Reading:
     latch: IntArray
     trailing: IntArray
     stop: LevelArray
+    over: IntArray
     acknowledge: Index
     start: Index
     columns: dict[str, npt.NDArray[np.uint64]] = field(default_factory=dict)
@@ -146,6 +148,7 @@ def _word_first(
         latch=latch,
         trailing=clocks.astype(np.int64) - n,
         stop=stop,
+        over=np.maximum(bursts.last_edge, sample[:, n] if sample.shape[1] > n else -1),
         acknowledge=zero,
         start=zero,
     )
@@ -175,6 +178,7 @@ def read_biss(bursts: Bursts, data: Edges, serial: Serial, rhythm: Rhythm, habit
     word = _from(levels, start + 2, n)
     read = np.where(started[:, None], word, np.int8(UNKNOWN))
     latch = bursts.times[bursts.first + np.minimum(1, bursts.count - 1)]
+    last_bit = np.minimum(start + 2 + n, np.maximum(clocks + habit.late, 1) - 1).astype(np.intp)
     return Reading(
         bursts=bursts,
         drive=np.where(reach, extended, np.int64(-1)),
@@ -188,6 +192,7 @@ def read_biss(bursts: Bursts, data: Edges, serial: Serial, rhythm: Rhythm, habit
         latch=latch,
         trailing=clocks + habit.late - (start + 2 + n),
         stop=_from(levels, start + 2 + n, 1)[:, 0],
+        over=np.maximum(bursts.last_edge, np.take_along_axis(sample, last_bit[:, None], axis=1)[:, 0]),
         acknowledge=acknowledge,
         start=start,
         columns={

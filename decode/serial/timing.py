@@ -66,7 +66,7 @@ def time_out(reading: Reading, data: Edges, stops: IntArray, *, from_rising: boo
     bursts = reading.bursts
     index = bursts.first + np.maximum(bursts.count - (1 if from_rising else 2), 0)
     last = bursts.times[index]
-    after = np.searchsorted(data.times, bursts.last_edge, side="right")
+    after = np.searchsorted(data.times, reading.over, side="right")
     inside = after < data.times.size
     where = np.where(inside, after, 0)
     if data.times.size == 0:

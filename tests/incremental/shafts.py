@@ -1,7 +1,8 @@
 """Shafts with an ideal encoder, made of exact crossings, for the tests of the incremental lines.
 
-Place p (in counts) is between two edges where p is not whole. State of count c, from place c to c + 1, is the c-th of 00 10 11 01 as
-A B; so A changes at odd places and B at even ones. The index is high from place `first` to `first + width`, once a turn.
+Place p (in counts) is between two edges where p is not whole. State of count c, from place c to c + 1, is the c-th of
+00 10 11 01 as A B; so A changes at odd places and B at even ones. The index is high from place `first` to `first +
+width`, once a turn.
 """
 
 from __future__ import annotations
@@ -19,7 +20,8 @@ TICK_S = 1e-8
 
 
 def crossings(place: float, legs: Iterable[tuple[float, float]]) -> list[tuple[float, float, int]]:
-    """(time, whole place, direction) of everything a shaft passes that starts at `place` and does `legs` of (to place, ticks)."""
+    """(time, whole place, direction) of everything a shaft passes that starts at `place` and does `legs` of (to
+    place, ticks)."""
     passed = []
     now = 0.0
     for target, ticks in legs:
@@ -27,8 +29,7 @@ def crossings(place: float, legs: Iterable[tuple[float, float]]) -> list[tuple[f
         inner = np.arange(np.ceil(min(place, target)), np.floor(max(place, target)) + 1)
         if way < 0:
             inner = inner[::-1]
-        for whole in inner.tolist():
-            passed.append((now + (whole - place) / (target - place) * ticks, int(whole), way))
+        passed += [(now + (whole - place) / (target - place) * ticks, int(whole), way) for whole in inner.tolist()]
         place, now = target, now + ticks
     return passed
 

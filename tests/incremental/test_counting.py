@@ -1,4 +1,5 @@
-"""Four counts to a cycle. Expected values: the decoding table worked out by hand in each docstring, or the plain loop."""
+"""Four counts to a cycle. Expected values: the decoding table worked out by hand in each docstring, or the plain
+loop."""
 
 from __future__ import annotations
 
@@ -45,8 +46,9 @@ def counted(span: Span) -> Counts:
     ],
 )
 def test_states(states, net, illegal):
-    """Exact arithmetic on the decoding table: up is 00 10 11 01; both lines at once have no direction. Seen only every second
-    state all steps are illegal; every third state looks like one step back: 120 states, 40 looks, 39 steps down."""
+    """Exact arithmetic on the decoding table: up is 00 10 11 01; both lines at once have no direction. Seen only
+    every second state all steps are illegal; every third state looks like one step back: 120 states, 40 looks, 39
+    steps down."""
     assert count_states(states) == (net, illegal)
     counts = counted(of_states(states))
     assert int(counts.counts[-1]) == net
@@ -84,7 +86,8 @@ def swapped(span: Span, a: str, b: str, flip_a: int, flip_b: int) -> Span:
 
 def test_wiring():
     """Exact arithmetic: swapping A and B or inverting one of them runs the states backwards, inverting both
-    turns the cycle by half. With the index gated with A = B = 1, the state at the index tells which (state 11 is place 2)."""
+    turns the cycle by half. With the index gated with A = B = 1, the state at the index tells which (state 11 is
+    place 2)."""
     span = steady(3.2, index=(2, 1))
     assert [decoded(swapped(span, *wires)).net_counts for wires in (("A", "B", 0, 0), ("B", "A", 0, 0))] == [205, -205]
     inverted = decoded(swapped(span, "A", "B", 1, 0))
@@ -144,7 +147,8 @@ def test_places_are_the_same_both_ways():
 
 
 def test_a_break_starts_afresh():
-    """After a break the levels are what they are: 00 to 11 across it is no step, and the count goes on from where it was."""
+    """After a break the levels are what they are: 00 to 11 across it is no step, and the count goes on from where it
+    was."""
     decoder = QuadratureDecoder("A", "B", None, None, TICK_S)
     first = decoder.feed(of_states([0, 2]))
     after = Span(1000, 1200, {"A": Edges.none(0), "B": Edges.from_toggles(1, [1100])}, joined=False)
@@ -174,8 +178,8 @@ def read_vcd(path: Path, names: set[str]) -> tuple[int, dict[str, Edges]]:
 
 
 def test_knob():
-    """A simulated knob, not of ours (source: public repository rgb_mixer, commit 8dddee13): 510 steps up, then 509 down, turning at
-    25.59 ms, nothing illegal."""
+    """A simulated knob, not of ours (source: public repository rgb_mixer, commit 8dddee13): 510 steps up, then 509
+    down, turning at 25.59 ms, nothing illegal."""
     if not KNOB.exists():
         pytest.skip("the shared capture quadrature_knob.vcd is not beside the checkout")
     stop, lines = read_vcd(KNOB, {"a", "b"})

@@ -1,4 +1,5 @@
-"""Wherever a capture is cut into spans, everything comes out the same: the promise that lets captures be of any length."""
+"""Wherever a capture is cut into spans, everything comes out the same: the promise that lets captures be of any
+length."""
 
 from __future__ import annotations
 
@@ -66,8 +67,8 @@ def a_capture(legs: list[tuple[int, int]], pulses: list[tuple[str, int, int]]) -
 @settings(max_examples=40, deadline=None)
 @given(motions, faults, cuts, st.booleans())
 def test_cuts(legs, pulses, at, stated):
-    """Motion that sways, starts and stops, pulses on every line, cut anywhere down to one edge a span: same counts, distributions,
-    tables and findings."""
+    """Motion that sways, starts and stops, pulses on every line, cut anywhere down to one edge a span: same counts,
+    distributions, tables and findings."""
     span = a_capture(legs, pulses)
     sheet = SHEET if stated else None
     whole = everything([span], sheet)

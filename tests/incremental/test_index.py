@@ -57,8 +57,8 @@ def test_the_index_is_the_same_both_ways():
 
 @pytest.mark.parametrize("delay", [-4, 25, 30])
 def test_late_index_edges(delay):
-    """Index edges 40 ns before to 300 ns after A/B (in ticks of 10 ns; source: Broadcom HEDS-9040/9140, US Digital EM2), at a state of
-    400 ns, both ways: no finding."""
+    """Index edges 40 ns before to 300 ns after A/B (in ticks of 10 ns; source: Broadcom HEDS-9040/9140, US Digital
+    EM2), at a state of 400 ns, both ways: no finding."""
     result = decoded(board(10.5, [(410.5, 400 * 40), (10.5, 400 * 40)], delay=delay), index_width_counts=1)
     assert kinds(result) == []
 
@@ -127,8 +127,8 @@ def cycle_at(place: int) -> int:
 
 @pytest.mark.parametrize("place", [30, 100, 300, 480])
 def test_lost_counts(place):
-    """Four counts lost in one turn: from there on every pulse comes four counts early, and one turn is wrong. Before the
-    first index there is no turn to be wrong."""
+    """Four counts lost in one turn: from there on every pulse comes four counts early, and one turn is wrong. Before
+    the first index there is no turn to be wrong."""
     result = decoded(lost(CLEAN, cycle_at(place)))
     assert kinds(result) == ([] if place < 64 else ["turn_count_wrong"])
     if place >= 64:
@@ -166,6 +166,9 @@ def test_widths():
     result = decoded(wide)
     assert findings(result) == [("index_width", tick_of(255))]
     assert evidence(result, "index_width")["width_counts"] == [3]
+    one_side = toggled(without(CLEAN, 3), "Z", [tick_of(256), tick_of(259)])
+    assert kinds(decoded(one_side)) == ["index_width"]
+    assert decoded(one_side).turns.counts.tolist() == [TURN] * 7
     every = decoded(steady(8, index=(0, 2)), index_width_counts=1)
     assert kinds(every) == ["index_width"]
     assert evidence(every, "index_width")["pulses"] == [8]
@@ -210,7 +213,8 @@ def test_turning_back_inside_the_index():
 
 
 def test_an_illegal_step_loses_no_turn():
-    """One A edge comes at the tick of the next B edge: a plain counter loses two counts there, the turn is known to be whole."""
+    """One A edge comes at the tick of the next B edge: a plain counter loses two counts there, the turn is known to
+    be whole."""
     edge, other = int(CLEAN.lines["A"].times[150]), None
     times = CLEAN.lines["A"].times.copy()
     other = int(CLEAN.lines["B"].times[CLEAN.lines["B"].times > edge][0])

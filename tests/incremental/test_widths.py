@@ -15,7 +15,8 @@ from decode.spans import Edges, Span
 def uneven(
     a_rise: float, a_fall: float, b_rise: float, b_fall: float, cycles: int, angle_to_time, way: int = 1
 ) -> Span:
-    """A/B whose edges lie at these electrical degrees of each cycle, passed at angle_to_time(cycles since the start)."""
+    """A/B whose edges lie at these electrical degrees of each cycle, passed at angle_to_time(cycles since the
+    start)."""
     sign = np.arange(cycles)
     place = {
         "A": np.stack([sign + a_rise / 360, sign + a_fall / 360], axis=1).ravel(),
@@ -41,8 +42,8 @@ def only(result: IncrementalResult, name: str) -> list[float]:
 
 @pytest.mark.parametrize("way", [1, -1])
 def test_uneven_states(way):
-    """A high 0 to 190, B high 85 to 275: A 190, B 190, phase from 95 to 180 is 85, states 85 (10), 105 (11), 85 (01), 85 (00),
-    whichever way they are passed."""
+    """A high 0 to 190, B high 85 to 275: A 190, B 190, phase from 95 to 180 is 85, states 85 (10), 105 (11), 85 (01),
+    85 (00), whichever way they are passed."""
     result = without_index(uneven(0, 190, 85, 275, 40, lambda place: 36_000 * place + 10, way))
     assert only(result, "pulse_width_a_deg") == [190]
     assert only(result, "pulse_width_b_deg") == [190]
@@ -65,16 +66,18 @@ def test_speed_drops_out():
 
 @pytest.mark.parametrize("way", [1, -1])
 def test_edge_error(way):
-    """Edges at 0, 85, 190, 275. A's rise lies at 0, midway between its falls at -170 and 190 is 10: it comes 10 early, its fall
-    10 late (190 against 180); B likewise: rise 85 against (-85 + 275) / 2 = 95, fall 275 against (85 + 445) / 2 = 265. As mechanical
-    angle 10 / 16 degrees, with the sign of the count; all of it repeats, so the jitter is none."""
+    """Edges at 0, 85, 190, 275. A's rise lies at 0, midway between its falls at -170 and 190 is 10: it comes 10
+    early, its fall 10 late (190 against 180); B likewise: rise 85 against (-85 + 275) / 2 = 95, fall 275 against (85
+    + 445) / 2 = 265. As mechanical angle 10 / 16 degrees, with the sign of the count; all of it repeats, so the
+    jitter is none."""
     result = without_index(uneven(0, 190, 85, 275, 40, lambda place: 36_000 * place + 10, way))
     assert only(result, "edge_error_deg") == [-0.625, 0.625]
     assert only(result, "edge_jitter_deg") == [0]
 
 
 def test_edge_error_at_constant_acceleration():
-    """The midpoint in time is not the midpoint in angle; the bend is taken out: what is left is below 0.2 electrical degrees."""
+    """The midpoint in time is not the midpoint in angle; the bend is taken out: what is left is below 0.2 electrical
+    degrees."""
     result = without_index(uneven(0, 180, 90, 270, 400, lambda place: 1e7 * np.sqrt(place) + 10))
     errors = result.distributions["edge_error_deg"]
     assert errors.n > 1400
@@ -82,8 +85,8 @@ def test_edge_error_at_constant_acceleration():
 
 
 def test_drive_encoder_at_full_speed():
-    """3000 rpm with 2048 lines: 102.4 kHz, cycle 9.765625 us, state 2.44140625 us (source: STOEBER PS6 manual 442728.05). In
-    ticks of 1/128 us the cycle is 1250 and states 312 or 313."""
+    """3000 rpm with 2048 lines: 102.4 kHz, cycle 9.765625 us, state 2.44140625 us (source: STOEBER PS6 manual
+    442728.05). In ticks of 1/128 us the cycle is 1250 and states 312 or 313."""
     times = np.arange(1, 4001) * 1250 // 4
     span = Span(0, 1_300_000, {"A": Edges.from_toggles(0, times[::2]), "B": Edges.from_toggles(0, times[1::2])})
     decoder = QuadratureDecoder("A", "B", None, Incremental(cycles_per_turn=2048), 1e-6 / 128)
@@ -95,15 +98,16 @@ def test_drive_encoder_at_full_speed():
 
 
 def test_speed_at_100_kilohertz():
-    """100 kHz with 1024 lines is 5859.375 rpm (exact arithmetic), counted down: negative. 1000 ticks of 10 ns a cycle."""
+    """100 kHz with 1024 lines is 5859.375 rpm (exact arithmetic), counted down: negative. 1000 ticks of 10 ns a
+    cycle."""
     result = decoded(steady(-1, turn=4096, state=250), cycles=1024)
     assert only(result, "speed_rpm") == [-5859.38]
     assert result.by_direction[1]["speed_rpm"].n == 0
 
 
 def test_a_stop_and_a_reversal_leave_no_width():
-    """A shaft that parks in the middle of a state and one that turns back: the states around are not measured, all others are 90
-    within the grid of one tick in 240."""
+    """A shaft that parks in the middle of a state and one that turns back: the states around are not measured, all
+    others are 90 within the grid of one tick in 240."""
     span = board(10.5, [(90.5, 80 * 240), (90.501, 50_000), (170.5, 80 * 240), (90.5, 80 * 240)])
     result = decoded(span)
     widths = result.distributions["state_width_deg"]

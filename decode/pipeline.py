@@ -113,7 +113,7 @@ class _Bench:
         self._sheet, self._lines, self._capture = sheet, lines, capture
         tick = float(capture.tick)
         pairs = {lines[role]: lines[complement] for complement, role in COMPLEMENTS.items() if complement in lines}
-        self._pairs = PairCombiner(pairs, default_skew(capture.tick, 1))
+        self._pairs = PairCombiner(pairs, default_skew(capture.tick, max(1, capture.grid)))
         self._plain = {role: column for role, column in lines.items() if role not in COMPLEMENTS}
         partners = [
             (self._plain[one], self._plain[other])
