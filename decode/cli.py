@@ -31,8 +31,8 @@ if TYPE_CHECKING:
 
     from decode.bench.motion import Motion
     from decode.bench.scenario import Fault
-    from decode.pipeline import Checked
     from decode.judgement.records import Report
+    from decode.pipeline import Checked
 
 PASS, FAIL, USAGE, UNDECIDED, BUG, INTERRUPTED, PIPE_CLOSED = 0, 1, InputError.exit_code, 3, 70, 130, 141
 EXIT_CODES = {"pass": PASS, "fail": FAIL, "undecided": UNDECIDED}

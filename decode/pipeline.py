@@ -55,7 +55,11 @@ def check(
     Raises InputError where either cannot be used. progress: called with the part done, 0 to 1, and what is going on.
     """
     board = sheet if isinstance(sheet, Sheet) else load(sheet)
-    capture = open_capture(path, board.capture)
+    return check_capture(open_capture(path, board.capture), board, progress=progress, command=command)
+
+
+def check_capture(capture: Capture, board: Sheet, *, progress: Progress | None = None, command: str = "") -> Checked:
+    """Check an opened capture; see `check`. Its spans go by once."""
     lines = _lines(board, capture)
     bench = _Bench(board, lines, capture)
     for span in capture.spans(list(dict.fromkeys(lines.values()))):

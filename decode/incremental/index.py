@@ -397,32 +397,32 @@ class _Judge:
         return self._counts_lost(one, reference)
 
     def _find_missing(self) -> None:
-        """Every time the count passed the index's place and no pulse came."""
-        if not self.right:
-            return
-        pulses, trace = self.reading.pulses, self.trace
-        right, outliers = set(self.right), set(self.outliers)
-        marks = [one for one in range(pulses.rise.size) if one not in outliers]
-        moved = {other for _, other in self.shifts}
-        reference = self.right[0]
+        """Every time the count passed the index's place and no pulse came, stretch by stretch: where the capture is
+        broken, times may start again."""
+        stretches = self.reading.pulses.stretch
+        for stretch in dict.fromkeys(int(stretches[one]) for one in self.right):
+            self._find_missing_in(stretch)
+
+    def _find_missing_in(self, stretch: int) -> None:
+        pulses = self.reading.pulses
+        rows = self.trace.stretch == stretch
+        times, way = self.trace.times[rows], self.trace.place[rows]
+        outliers, moved = set(self.outliers), {other for _, other in self.shifts}
+        right = {one for one in self.right if pulses.stretch[one] == stretch}
+        marks = [one for one in np.flatnonzero(pulses.stretch == stretch).tolist() if one not in outliers]
+        reference = min(right)
         previous: int | None = None
         for one in [*marks, None]:
-            start = int(pulses.fall[previous]) if previous is not None else None
-            stop = int(pulses.rise[one]) if one is not None else None
-            first = int(np.searchsorted(trace.times, start, "right")) if start is not None else 0
-            last = int(np.searchsorted(trace.times, stop, "left")) if stop is not None else trace.times.size
-            ticks, places = trace.times[first:last], trace.place[first:last]
-            stretch = trace.stretch[first:last]
+            first = 0 if previous is None else int(np.searchsorted(times, pulses.fall[previous], "right"))
+            last = times.size if one is None else int(np.searchsorted(times, pulses.rise[one], "left"))
+            ticks, places = times[first:last], way[first:last]
             if previous is not None:
                 ticks = np.concatenate([pulses.fall[[previous]], ticks])
                 places = np.concatenate([pulses.fall_place[[previous]], places])
-                stretch = np.concatenate([pulses.stretch[[previous]], stretch])
             if one is not None:
                 ticks = np.concatenate([ticks, pulses.rise[[one]]])
                 places = np.concatenate([places, pulses.rise_place[[one]]])
-                stretch = np.concatenate([stretch, pulses.stretch[[one]]])
-            here = stretch == pulses.stretch[reference]
-            for tick, place in self._passes(ticks[here], places[here], float(self.place[reference])):
+            for tick, place in self._passes(ticks, places, float(self.place[reference])):
                 if one is None or one not in moved or abs(place - float(self.place[one])) > self.turn / 2:
                     self.missing.append((tick, place))
             if one is not None and one in right:

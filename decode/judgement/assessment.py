@@ -70,7 +70,7 @@ def measured(
         mean=mean,
         max=largest,
         std=std,
-        uncertainty=uncertainty,
+        uncertainty=float(uncertainty),
         limit=limit,
         verdict=verdict,
         reason=reason,

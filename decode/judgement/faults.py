@@ -21,7 +21,7 @@ from decode.judgement.folding import (
 )
 from decode.judgement.records import Measurement
 from decode.serial.causes import frame_anomalies, missing_anomalies
-from decode.spans import IntArray
+from decode.spans import BoolArray, IntArray
 
 SAMPLES_NEEDED = 4
 """Samples in a clock period and in an A/B state below which nothing is decided (common practice, no source)."""
@@ -63,6 +63,7 @@ def _fold(evidence: Evidence, found: Docket) -> None:
     illegal = ticks_of(found.of("illegal_transition"))
     if illegal.size:
         _fold_illegal(evidence, found, illegal)
+    _move_index(evidence, found)
     _fold_turns(found)
     if found.has("direction_opposed", "scale_wrong"):
         found.withdraw(("residual_high", "latency_high"))
@@ -227,12 +228,55 @@ def _fold_illegal(evidence: Evidence, found: Docket, illegal: IntArray) -> None:
     found.withdraw(("turn_count_wrong",), miscounted)
 
 
+def _move_index(evidence: Evidence, found: Docket) -> None:
+    """Where the serial position bears the count out, a turn that seems miscounted is an index that moved.
+
+    The serial position alone can tell these apart when the index moves for several turns running.
+    """
+    agreement, serial, result = evidence.agreement, evidence.serial, evidence.incremental
+    if agreement is None or agreement.serial_turns is None or agreement.scale_wrong or serial is None:
+        return
+    assert result is not None
+    known = np.flatnonzero(np.isfinite(agreement.serial_turns))
+    if known.size == 0 or result.index is None:
+        return
+    first, last = int(serial.frames.latch[known[0]]), int(serial.frames.latch[known[-1]])
+
+    def borne_out(one: Anomalies) -> BoolArray:
+        start, stop = (np.asarray(one.evidence[name], np.int64) for name in ("start_ticks", "stop_ticks"))
+        slack = (stop - start) // 8
+        steps = agreement.steps.time[None, :]
+        stepped = (steps >= (start - slack)[:, None]) & (steps <= (stop + slack)[:, None])
+        return np.asarray((start >= first) & (stop <= last) & ~stepped.any(axis=1), np.bool_)
+
+    if found.withdraw(("turn_count_wrong",), borne_out):
+        rises = _displaced(evidence, found)
+        causes = ["the count agrees with the serial position over these turns, so the index moved"] * rises.size
+        found.add(Anomalies("index_misplaced", rises, line=evidence.lines.get("index"), causes=causes))
+
+
+def _displaced(evidence: Evidence, found: Docket) -> IntArray:
+    """Ticks of the index pulses that lie more than a count and a half from where most of them lie, by the serial
+    position, and are not told yet."""
+    agreement, serial, result = evidence.agreement, evidence.serial, evidence.incremental
+    turn = evidence.counts_per_turn()
+    assert agreement is not None and agreement.serial_turns is not None and serial is not None and turn is not None
+    assert result is not None and result.index is not None
+    known = np.isfinite(agreement.serial_turns)
+    table = result.index
+    right = np.array([role == "index" for role in table.role], np.bool_) & ~table.turned
+    middle = (table.rise_ticks + table.fall_ticks)[right] / 2
+    turns = np.interp(middle, serial.frames.latch[known].astype(np.float64), agreement.serial_turns[known])
+    apart = (turns[:, None] - turns[None, :] + 0.5) % 1.0 - 0.5
+    usual = int(np.argmin(np.median(np.abs(apart), axis=0)))
+    off = np.abs(apart[:, usual]) > 1.5 / turn
+    rises = table.rise_ticks[right][off]
+    return np.setdiff1d(rises, ticks_of([*found.of("index_misplaced"), *found.of("index_extra")]))
+
+
 def _fold_turns(found: Docket) -> None:
     """The index shows that the count, not the serial position, went wrong in a turn."""
     for turn in found.of("turn_count_wrong"):
-        if turn.evidence.get("every_turn"):
-            found.withdraw(("scale_wrong", "residual_high", "offset_step"))
-            continue
         for start, stop in zip(turn.evidence["start_ticks"], turn.evidence["stop_ticks"], strict=True):
             slack = (int(stop) - int(start)) // 8
             found.withdraw(("offset_step",), within(int(start) - slack, int(stop) + slack))

@@ -87,7 +87,7 @@ def test_cut_anywhere_the_frame_is_the_same(span: Span, every: int) -> None:
 
 
 def test_a_flipped_bit_fails_the_check(span: Span) -> None:
-    """A pulse over one sampling edge turns one bit, and each single bit has a remainder of its own (exact arithmetic)."""
+    """A pulse over one sampling edge turns one bit, which no CRC lets pass (exact arithmetic)."""
     times = span.lines["data"].times
     at = int(times[3]) + 250  # within a run of zeros
     spoilt = Edges.from_toggles(1, np.sort(np.concatenate([times, [at, at + 125]])))
