@@ -11,6 +11,7 @@ from typing import Any
 import pytest
 
 from decode.cli import main
+from decode.judgement.measurements import MEASUREMENTS
 
 ROOT = Path(__file__).parents[1]
 CAPTURES = ROOT / "captures"
@@ -106,6 +107,12 @@ def test_frames_counts_and_latency_are_those_of_the_truth(name: str, faulty: int
     assert incremental["index_pulses"] == truth["index_pulses"]
     assert agreement["direction"] == truth["direction"]
     assert abs(agreement["latency_s"] - truth["latency_s"]) <= agreement["latency_uncertainty_s"]
+
+
+def test_the_sound_captures_hold_every_measurement(tmp_path: Path) -> None:
+    """So each row of the table is taken somewhere, and the demo shows it."""
+    reports = [_report(name, tmp_path)[1] for name in ("larkspur-healthy", "larkspur-elevation-ssi")]
+    assert {one["name"] for report in reports for one in report["measurements"] if one["n"]} == set(MEASUREMENTS)
 
 
 def test_the_flipped_bit_is_named(tmp_path: Path) -> None:

@@ -161,6 +161,17 @@ def test_every_link_between_pages_leads_somewhere(page: Path) -> None:
         assert not anchor or anchor in _anchors(linked), target
 
 
+def test_every_path_for_contributors_is_there() -> None:
+    """A path in backquotes in DEVELOPERS.md is a file or a folder; the picture names every room."""
+    text = _read(ROOT / "DEVELOPERS.md")
+    paths = re.findall(r"`((?:decode|tests|docs|captures)/[\w./-]*)`", text)
+    assert len(paths) > 20
+    for path in paths:
+        assert (ROOT / path).exists(), path
+    rooms = {folder.parent.name for folder in (ROOT / "decode").glob("*/__init__.py")}
+    assert set(re.findall(r"\b(\w+)/  ", text.split("## The house")[1].split("## Words")[0])) == rooms
+
+
 def test_the_list_of_pages_is_whole() -> None:
     """docs/README.md links every other page in docs/; README.md does as well."""
     pages = {page.name for page in DOCS.glob("*.md")} - {"README.md"}

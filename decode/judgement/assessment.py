@@ -8,6 +8,7 @@ from __future__ import annotations
 
 import math
 
+import msgspec
 import numpy as np
 
 from decode.judgement.measurements import MEASUREMENTS
@@ -80,13 +81,25 @@ def measured(
 def single(
     name: str, value: float, *, uncertainty: float, limit: Limit | None = None, n: int = 1, line: str | None = None
 ) -> Measurement:
-    """A measurement that is one number."""
-    return measured(name, line, np.array([value]), np.array([n], np.int64), uncertainty=uncertainty, limit=limit)
+    """A measurement that is one number. A limit too tight for it to decide binds only if the sheet states it."""
+    one = measured(name, line, np.array([value]), np.array([n], np.int64), uncertainty=uncertainty, limit=limit)
+    if limit is None or one.verdict != "undecided" or stated(limit) or not _too_tight(limit, uncertainty):
+        return one
+    return msgspec.structs.replace(one, verdict=None, reason="the capture is too short to decide")
+
+
+def stated(limit: Limit) -> bool:
+    """Whether a limit is the sheet's, not a published or a customary one."""
+    return limit.source.startswith("sheet")
+
+
+def _too_tight(limit: Limit, uncertainty: float) -> bool:
+    return limit.min is not None and limit.max is not None and limit.max - limit.min < 2 * uncertainty
 
 
 def missing(name: str, line: str | None, limit: Limit | None, reason: str) -> Measurement:
     """A measurement the capture cannot give. Only a limit from the sheet leaves it undecided."""
-    asked = limit is not None and limit.source.startswith("sheet")
+    asked = limit is not None and stated(limit)
     return Measurement(
         name=name,
         line=line,

@@ -53,9 +53,22 @@ def _told(value: Any) -> bool:
 
 
 def _detail(meaning: str, evidence: dict[str, Any]) -> str:
-    told = [f"{name.replace('_', ' ')} {_short(value)}" for name, value in evidence.items()]
-    return f"{meaning}: {', '.join(told)}" if told else meaning
+    """The evidence in words, or what the kind means where there is none."""
+    told = [words for name, value in evidence.items() if (words := _words(name, value))]
+    return ", ".join(told) or meaning
 
 
-def _short(value: Any) -> str:
-    return f"{value:.6g}" if isinstance(value, float) else str(value)
+def _words(name: str, value: Any) -> str:
+    if isinstance(value, bool):
+        return name.replace("_", " ") if value else ""
+    if isinstance(value, float) and name.endswith("_s"):
+        return f"{name.removesuffix('_s').replace('_', ' ')} {_seconds(value)}"
+    return f"{name.replace('_', ' ')} {f'{value:.6g}' if isinstance(value, float) else value}"
+
+
+def _seconds(value: float) -> str:
+    """Short times with a prefix, as they are spoken of; instants later than a second keep their digits."""
+    for unit, size in (("s", 1.0), ("ms", 1e-3), ("us", 1e-6), ("ns", 1e-9)):
+        if abs(value) >= size:
+            return f"{value / size:.9g} {unit}"
+    return f"{value / 1e-9:.3g} ns"

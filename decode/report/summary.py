@@ -348,8 +348,8 @@ def _index_parts(report: Report) -> Iterator[str]:
         yield f"at {with_uncertainty(position.median, position.uncertainty, 'deg', digits=4)}"
     repeat = measured(report, "index_repeatability_deg")
     if repeat is not None and repeat.min is not None and repeat.max is not None:
-        low, high = quantity(repeat.min, "deg", signed=True), quantity(repeat.max, "deg", signed=True)
-        yield f"repeats within {low} to {high}"
+        furthest = max(abs(repeat.min), abs(repeat.max), repeat.uncertainty or 0.0)
+        yield f"repeats within ±{quantity(furthest, 'deg')}"
     width = measured(report, "index_width_counts")
     if width is not None:
         yield f"{with_uncertainty(width.median, width.uncertainty, 'counts', digits=3)} wide"

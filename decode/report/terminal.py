@@ -182,7 +182,7 @@ def _print_rows(page: _Page, lines: Sequence[str], rows: Sequence[_Row]) -> None
 def _measurement_row(one: Measurement) -> _Row:
     """One row, its values in one scale and to the digits that the uncertainty leaves."""
     unit = unit_of(one.name, one.unit)
-    factor, symbol = scale([one.min, one.median, one.max], unit)
+    factor, symbol = scale([one.min, one.median, one.max, one.uncertainty], unit)
     values = [None if value is None else value * factor for value in (one.min, one.median, one.max)]
     doubt = None if one.uncertainty is None else one.uncertainty * factor
     decimals = decimals_beside(doubt, values)
@@ -249,9 +249,9 @@ def _print_totals(page: _Page, report: Report) -> None:
     least = quantity(totals.short_pulse_s, "s")
     without = f"x4, pulses under {least} dropped" if totals.short_pulse_s else "x4, short pulses dropped"
     rows = [
-        ["x4, every edge with its direction", quantity(totals.x4, "counts", signed=True)],
-        ["x1, a naive counter of A's rising edges", quantity(totals.x1_naive, "counts", signed=True)],
-        [without, quantity(totals.x4_without_short_pulses, "counts", signed=True)],
+        ["x4, every edge with its direction", f"{totals.x4:+d} counts"],
+        ["x1, a naive counter of A's rising edges", f"{totals.x1_naive:+d} counts"],
+        [without, f"{totals.x4_without_short_pulses:+d} counts"],
         ["A and B changed together", counted(report.incremental.illegal, "time")],
     ]
     for line in page.aligned(rows):
