@@ -248,7 +248,12 @@ def _write(checked: Checked, report: Report, *, json: str | None, frames: str | 
 def _console(width: int | None) -> Console:
     from rich.console import Console
 
-    return Console(width=width, highlight=False, markup=False, emoji=False)
+    class Page(Console):
+        def on_broken_pipe(self) -> None:
+            """rich would leave with 1, which is our exit code for a fault; `main` knows better."""
+            raise
+
+    return Page(width=width, highlight=False, markup=False, emoji=False)
 
 
 @contextmanager
@@ -391,12 +396,17 @@ def demo(context: typer.Context, width: _Width = None) -> int:
         with _showing_progress() as progress:
             from decode.pipeline import check as run
 
-            checked = run(str(capture), expect_sheet_beside(capture), progress=progress, command=context.obj)
+            checked = run(_nearer(capture), expect_sheet_beside(capture), progress=progress, command=context.obj)
         print(f"Demo capture {number} of {len(captures)}\n")
         render(checked.report, console, short=True)
         print("\n")
     print(_what_next(captures))
     return PASS
+
+
+def _nearer(path: Path) -> str:
+    """The path as seen from here, where that is shorter."""
+    return min(str(path), os.path.relpath(path), key=len)
 
 
 def expect_demo_captures() -> list[Path]:

@@ -7,8 +7,11 @@ nothing in it is skipped or guessed.
 
 from __future__ import annotations
 
+import math
 import re
 import tomllib
+import types
+import typing
 from collections.abc import Iterator
 from pathlib import Path
 from typing import Any, Literal
@@ -27,8 +30,23 @@ COMPLEMENTS = {f"{role}_n": role for role in ROLES if role != "select"}
 KNOWN_FIELDS = ("turns", "position", "error", "warning", "crc", "parity", "life", "fixed")
 REPEATABLE_FIELDS = ("crc", "parity", "fixed")
 
+KEYS_OF_SOME: dict[str, tuple[str, ...]] = {
+    "active": ("error", "warning"),
+    "kind": ("parity",),
+    "value": ("fixed",),
+    "polynomial": ("crc",),
+    "init": ("crc",),
+    "inverted": ("crc",),
+    "output_xor": ("crc",),
+    "reflected": ("crc",),
+    "covers": ("crc", "parity"),
+    "mask": ("parity",),
+}
+"""Which fields a field's key is for: elsewhere it would be skipped in silence."""
+
 LONGEST_FRAME = 512
 LONGEST_FIELD = 64
+MOST_CYCLES = 10**9
 
 
 class _Part(msgspec.Struct, frozen=True, forbid_unknown_fields=True, kw_only=True):
@@ -203,8 +221,14 @@ def from_toml(text: str, *, file: str = "sheet") -> Sheet:
     except msgspec.ValidationError as error:
         raise _refusal(error, text, tree, file) from None
     for path, problem, expected in _impossible(sheet):
+        found = _value_at(tree, path)
         raise InputError(
-            problem, file=file, row=_row_of(text, path), column=path, found=_found(tree, path), expected=expected
+            problem,
+            file=file,
+            row=_row_of(text, path),
+            column=path,
+            found=None if found is None else _shown(found),
+            expected=expected,
         )
     return sheet
 
@@ -237,14 +261,80 @@ def _refusal(error: msgspec.ValidationError, text: str, tree: dict[str, Any], fi
             column=path,
             expected=f"{missing.group(1)} = ...",
         )
+    path, kind = _culprit(path, tree)
+    found = _value_at(tree, path)
+    nearest = maybe_nearest(found, _choices(kind)) if isinstance(found, str) else None
     return InputError(
         "a value of the wrong kind",
         file=file,
         row=_row_of(text, path),
         column=path,
-        found=_found(tree, path),
-        expected=message,
+        found=_shown(found),
+        expected=_wanted(kind),
+        hint=f"did you mean {nearest!r}?" if nearest else None,
     )
+
+
+_KIND_NAMES = {int: "a whole number", float: "a number", str: 'a text, such as "MA"', bool: "true or false"}
+
+
+def _culprit(path: str, tree: dict[str, Any]) -> tuple[str, Any]:
+    """The path with the key that msgspec leaves out ("lines[...]") found again, and the type that belongs there."""
+    open_part, dots, _ = path.partition("[...]")
+    if dots:
+        of_value = _kind_at(open_part, "any")
+        path = path.replace("[...]", f".{next(k for k, v in tree[open_part].items() if not _is(v, of_value))}")
+    return path, _kind_at(*_steps(path))
+
+
+def _is(value: Any, kind: Any) -> bool:
+    try:
+        msgspec.convert(value, kind)
+    except msgspec.ValidationError:
+        return False
+    return True
+
+
+def _kind_at(*steps: str | int) -> Any:
+    """The type that belongs at a path into a sheet, without its None."""
+    kind: Any = Sheet
+    for step in steps:
+        arguments = typing.get_args(kind)
+        if typing.get_origin(kind) is tuple:
+            kind = arguments[0] if arguments[-1] is Ellipsis else arguments[int(step)]
+        else:
+            kind = arguments[1] if typing.get_origin(kind) is dict else typing.get_type_hints(kind)[str(step)]
+        some = [one for one in typing.get_args(kind) if one is not type(None)]
+        if isinstance(kind, types.UnionType) or typing.get_origin(kind) is typing.Union:
+            kind = some[0] if len(some) == 1 else typing.Union[tuple(some)]  # noqa: UP007
+    return kind
+
+
+def _choices(kind: Any) -> list[str]:
+    return [one for one in typing.get_args(kind) if isinstance(one, str)]
+
+
+def _wanted(kind: Any) -> str:
+    """A type in words."""
+    origin, arguments = typing.get_origin(kind), typing.get_args(kind)
+    if origin is Literal:
+        return " or ".join(f'"{one}"' if isinstance(one, str) else str(one) for one in arguments)
+    if origin is tuple:
+        return "a list" if arguments[-1] is Ellipsis else f"a list of {len(arguments)}"
+    if origin is dict or kind not in _KIND_NAMES and not arguments:
+        return "a part with keys of its own"
+    return " or ".join(_wanted(one) for one in arguments) if arguments else _KIND_NAMES[kind]
+
+
+def _shown(value: Any) -> str:
+    """A value of a sheet as the sheet writes it, as far as it matters."""
+    if isinstance(value, bool):
+        return str(value).lower()
+    text = repr(value) if isinstance(value, str | int | float | list | dict) else str(value)
+    return text if len(text) <= LONGEST_SHOWN else f"{text[:LONGEST_SHOWN]}..."
+
+
+LONGEST_SHOWN = 100
 
 
 _PARTS: dict[str, type[msgspec.Struct]] = {
@@ -265,13 +355,14 @@ def _steps(path: str) -> list[str | int]:
     return [int(step) if step.isdigit() else step for step in re.findall(r"[^.\[\]]+", path)]
 
 
-def _found(tree: Any, path: str) -> str | None:
+def _value_at(tree: Any, path: str) -> Any:
+    """What stands at a path of a sheet; None where nothing does."""
     for step in _steps(path):
         try:
             tree = tree[step]
         except (KeyError, IndexError, TypeError):
             return None
-    return repr(tree)
+    return tree
 
 
 def _row_of(text: str, path: str) -> int | None:
@@ -281,7 +372,7 @@ def _row_of(text: str, path: str) -> int | None:
         return None
     section, keys = str(steps[0]), steps[1:]
     rows = text.splitlines()
-    start = next((i for i, row in enumerate(rows) if re.match(rf"\s*\[{re.escape(section)}\]", row)), None)
+    start = next((i for i, row in enumerate(rows) if re.match(rf"\s*\[+{re.escape(section)}\]", row)), None)
     if start is None:
         pattern = re.compile(rf"\s*{re.escape(section)}\s*[.=]")
         return next((i + 1 for i, row in enumerate(rows) if pattern.match(row)), None)
@@ -336,7 +427,7 @@ def _impossible_serial(serial: Serial) -> Iterator[tuple[str, str, str]]:
         yield "serial.fields", "a word without fields", "at least one field"
     if not 0 <= serial.mode <= 3:
         yield "serial.mode", "no such mode", "0, 1, 2 or 3"
-    if serial.frame_rate_hz is not None and not serial.frame_rate_hz > 0:
+    if serial.frame_rate_hz is not None and not 0 < serial.frame_rate_hz < math.inf:
         yield "serial.frame_rate_hz", "an impossible rate", "hertz, above 0"
     if serial.copies < 1 or (serial.copies > 1 and serial.interface != "ssi"):
         yield "serial.copies", "only ssi can send one word more than once", "1, or 2 and more with ssi"
@@ -353,6 +444,7 @@ def _impossible_serial(serial: Serial) -> Iterator[tuple[str, str, str]]:
             yield f"{path}.name", f"two fields named {field.name!r}", "different names"
         if not 1 <= field.bits <= LONGEST_FIELD:
             yield f"{path}.bits", "an impossible width", f"1 to {LONGEST_FIELD}"
+        yield from _impossible_key(field, path)
         yield from _impossible_check(serial, number, path)
         for covered in field.covers or ():
             if covered not in names:
@@ -363,6 +455,20 @@ def _impossible_serial(serial: Serial) -> Iterator[tuple[str, str, str]]:
         yield "serial.coding", "gray without a position", "a field named position"
     if serial.position_bits + serial.turns_bits > LONGEST_FIELD - 1:
         yield "serial.fields", "turns and position are too wide together", f"at most {LONGEST_FIELD - 1} bits"
+
+
+def _impossible_key(field: Field, path: str) -> Iterator[tuple[str, str, str]]:
+    """Names and keys that would be taken for something else, or for nothing."""
+    if field.name not in KNOWN_FIELDS and field.name.lower() in KNOWN_FIELDS:
+        yield f"{path}.name", f"unknown name {field.name!r}; did you mean {field.name.lower()!r}?", "small letters"
+    for key in msgspec.structs.fields(Field):
+        names = KEYS_OF_SOME.get(key.name, (field.name,))
+        if field.name not in names and getattr(field, key.name) != key.default:
+            yield (
+                f"{path}.{key.name}",
+                f"a field named {field.name!r} has no {key.name}",
+                f"name = {' or '.join(names)}",
+            )
 
 
 def _impossible_check(serial: Serial, number: int, path: str) -> Iterator[tuple[str, str, str]]:
@@ -410,9 +516,9 @@ def _impossible_cover(serial: Serial, number: int, path: str) -> Iterator[tuple[
 
 
 def _impossible_incremental(incremental: Incremental) -> Iterator[tuple[str, str, str]]:
-    if incremental.cycles_per_turn is not None and incremental.cycles_per_turn < 1:
-        yield "incremental.cycles_per_turn", "an impossible resolution", "1 or more cycles per turn"
-    if incremental.index_width_counts is not None and not incremental.index_width_counts > 0:
+    if incremental.cycles_per_turn is not None and not 1 <= incremental.cycles_per_turn <= MOST_CYCLES:
+        yield "incremental.cycles_per_turn", "an impossible resolution", f"cycles per turn, 1 to {MOST_CYCLES}"
+    if incremental.index_width_counts is not None and not 0 < incremental.index_width_counts < math.inf:
         yield "incremental.index_width_counts", "an impossible width", "counts, above 0"
     if incremental.index_states is not None and index_levels(incremental.index_states) is None:
         yield "incremental.index_states", "not an A/B state", '"a=1 b=1"'
@@ -437,5 +543,7 @@ def _impossible_limits(sheet: Sheet) -> Iterator[tuple[str, str, str]]:
             nearest = maybe_nearest(name, MEASUREMENTS)
             hint = f"; did you mean {nearest!r}?" if nearest else ""
             yield f"limits.{name}", f"no measurement named {name!r}{hint}", "a name from docs/measurements.md"
+        elif any(isinstance(end, float) and math.isnan(end) for end in (low, high)):
+            yield f"limits.{name}", "a limit that is no number", '[min, max], either may be "none"'
         elif not isinstance(low, str) and not isinstance(high, str) and low > high:
             yield f"limits.{name}", "the limits are the wrong way round", "[min, max]"

@@ -21,8 +21,8 @@ ELECTRICAL = frozenset({"state_width_deg", "pulse_width_a_deg", "pulse_width_b_d
 
 _PREFIXES = {-15: "f", -12: "p", -9: "n", -6: "µ", -3: "m", 0: "", 3: "k", 6: "M", 9: "G", 12: "T"}
 _SYMBOLS = {"deg": "°", "el_deg": "°e", "1": ""}
-_SCALED_DOWN_AND_UP = frozenset({"s", "Hz", "V"})
-_SCALED_DOWN = frozenset({"°", "°e"})
+_SCALED = frozenset({"s", "Hz", "V"})
+_DEGREES = frozenset({"°", "°e"})
 _MOST_DECIMALS = 9
 
 
@@ -47,10 +47,7 @@ def scale(values: Iterable[float | None], unit: str) -> tuple[float, str]:
         return (1e6, "ppm") if 0 < largest < 1e-3 else (1.0, "")
     symbol = _SYMBOLS.get(unit, unit)
     power = _prefix_power(largest)
-    if symbol in _SCALED_DOWN:
-        # Angles keep their plain unit down to a hundredth of a degree, as they are spoken of.
-        power = 0 if largest >= 0.01 else power
-    elif symbol not in _SCALED_DOWN_AND_UP:
+    if symbol not in _SCALED:
         return 1.0, symbol
     return 10.0**-power, _PREFIXES[power] + symbol
 
@@ -175,4 +172,4 @@ def counted(number: int, noun: str, plural: str | None = None) -> str:
 def _joined(text: str, symbol: str) -> str:
     if not symbol:
         return text
-    return f"{text}{symbol}" if symbol in _SCALED_DOWN else f"{text} {symbol}"
+    return f"{text}{symbol}" if symbol in _DEGREES else f"{text} {symbol}"

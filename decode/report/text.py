@@ -16,7 +16,7 @@ def visible(text: str) -> str:
 
 def in_ascii(text: str) -> str:
     """The text with each symbol of ours spelt out, for terminals that have none."""
-    for symbol, spelling in (("µ", "u"), ("°e", " el.deg"), ("m°", "mdeg"), ("°", " deg"), ("±", "+/-")):
+    for symbol, spelling in (("µ", "u"), ("°e", " el.deg"), ("°", " deg"), ("±", "+/-")):
         text = text.replace(symbol, spelling)
     return text.encode("ascii", "replace").decode()
 

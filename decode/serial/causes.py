@@ -24,6 +24,9 @@ from decode.spans import BoolArray, IntArray
 FITS_WITHIN = 16
 """Steps by which a position may leave the stretch between its neighbours and still fit (common practice, no source)."""
 
+MOSTLY_GOOD = 0.2
+"""Up to this share of frames a failing CRC is the line's doing (common practice, no source)."""
+
 ONE_PER_RUN = ("data_stuck", "position_stale")
 """Kinds of which neighbouring frames are one fault."""
 
@@ -127,7 +130,8 @@ def _crc_causes(frames: Frames, rows: IntArray, serial: Serial, modulus: int) ->
     known = (of_bit[bit] == of_frame) & alone[bit]
     mended = bits.copy()
     mended[np.flatnonzero(known), bit[known]] ^= 1
-    fits = known & _fits(frames, rows, words(mended, serial).position, modulus)
+    line_is_bad = rows.size <= MOSTLY_GOOD * len(frames)  # else the settings are, and any remainder names some bit
+    fits = known & line_is_bad & _fits(frames, rows, words(mended, serial).position, modulus)
     columns = serial.columns()
     starts = np.array([one.start for one in where])
     names: list[str | None] = []

@@ -30,7 +30,7 @@ def test_columns_are_as_wide_as_their_widest_cell() -> None:
 
 
 def test_symbols_are_spelt_out() -> None:
-    assert in_ascii("1 µs ± 2 m°, 90°e, 3° é") == "1 us +/- 2 mdeg, 90 el.deg, 3 deg ?"
+    assert in_ascii("1 µs ± 2°, 90°e, 3° é") == "1 us +/- 2 deg, 90 el.deg, 3 deg ?"
 
 
 def test_control_characters_become_visible_and_line_feeds_stay() -> None:
