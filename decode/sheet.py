@@ -221,7 +221,7 @@ def from_toml(text: str, *, file: str = "sheet") -> Sheet:
     except msgspec.ValidationError as error:
         raise _refusal(error, text, tree, file) from None
     for path, problem, expected in _impossible(sheet):
-        found = _value_at(tree, path)
+        found = _value_at(tree, _steps(path))
         raise InputError(
             problem,
             file=file,
@@ -261,8 +261,9 @@ def _refusal(error: msgspec.ValidationError, text: str, tree: dict[str, Any], fi
             column=path,
             expected=f"{missing.group(1)} = ...",
         )
-    path, kind = _culprit(path, tree)
-    found = _value_at(tree, path)
+    steps = _culprit(path, tree)
+    found, kind = _value_at(tree, steps), _kind_at(steps)
+    path = path.replace("[...]", f".{steps[1]}") if "[...]" in path else path
     nearest = maybe_nearest(found, _choices(kind)) if isinstance(found, str) else None
     return InputError(
         "a value of the wrong kind",
@@ -275,16 +276,17 @@ def _refusal(error: msgspec.ValidationError, text: str, tree: dict[str, Any], fi
     )
 
 
-_KIND_NAMES = {int: "a whole number", float: "a number", str: 'a text, such as "MA"', bool: "true or false"}
+_KIND_NAMES = {int: "a whole number", float: "a number", str: "a text in double quotes", bool: "true or false"}
+LONGEST_SHOWN = 100
 
 
-def _culprit(path: str, tree: dict[str, Any]) -> tuple[str, Any]:
-    """The path with the key that msgspec leaves out ("lines[...]") found again, and the type that belongs there."""
-    open_part, dots, _ = path.partition("[...]")
-    if dots:
-        of_value = _kind_at(open_part, "any")
-        path = path.replace("[...]", f".{next(k for k, v in tree[open_part].items() if not _is(v, of_value))}")
-    return path, _kind_at(*_steps(path))
+def _culprit(path: str, tree: dict[str, Any]) -> list[str | int]:
+    """The steps of a path with the key found again that msgspec leaves out of "lines[...]"."""
+    steps = _steps(path.replace("[...]", ".*"))
+    if "*" in steps:
+        table, kind = tree[str(steps[0])], _kind_at(steps[:2])
+        steps[1] = next(key for key, value in table.items() if not _is(value, kind))
+    return steps
 
 
 def _is(value: Any, kind: Any) -> bool:
@@ -295,7 +297,7 @@ def _is(value: Any, kind: Any) -> bool:
     return True
 
 
-def _kind_at(*steps: str | int) -> Any:
+def _kind_at(steps: list[str | int]) -> Any:
     """The type that belongs at a path into a sheet, without its None."""
     kind: Any = Sheet
     for step in steps:
@@ -311,7 +313,10 @@ def _kind_at(*steps: str | int) -> Any:
 
 
 def _choices(kind: Any) -> list[str]:
-    return [one for one in typing.get_args(kind) if isinstance(one, str)]
+    """The texts that a type is one of, if it is."""
+    if typing.get_origin(kind) is Literal:
+        return [one for one in typing.get_args(kind) if isinstance(one, str)]
+    return [choice for one in typing.get_args(kind) for choice in _choices(one)]
 
 
 def _wanted(kind: Any) -> str:
@@ -321,7 +326,7 @@ def _wanted(kind: Any) -> str:
         return " or ".join(f'"{one}"' if isinstance(one, str) else str(one) for one in arguments)
     if origin is tuple:
         return "a list" if arguments[-1] is Ellipsis else f"a list of {len(arguments)}"
-    if origin is dict or kind not in _KIND_NAMES and not arguments:
+    if origin is dict or (kind not in _KIND_NAMES and not arguments):
         return "a part with keys of its own"
     return " or ".join(_wanted(one) for one in arguments) if arguments else _KIND_NAMES[kind]
 
@@ -332,9 +337,6 @@ def _shown(value: Any) -> str:
         return str(value).lower()
     text = repr(value) if isinstance(value, str | int | float | list | dict) else str(value)
     return text if len(text) <= LONGEST_SHOWN else f"{text[:LONGEST_SHOWN]}..."
-
-
-LONGEST_SHOWN = 100
 
 
 _PARTS: dict[str, type[msgspec.Struct]] = {
@@ -355,9 +357,9 @@ def _steps(path: str) -> list[str | int]:
     return [int(step) if step.isdigit() else step for step in re.findall(r"[^.\[\]]+", path)]
 
 
-def _value_at(tree: Any, path: str) -> Any:
-    """What stands at a path of a sheet; None where nothing does."""
-    for step in _steps(path):
+def _value_at(tree: Any, steps: list[str | int]) -> Any:
+    """What stands at a path into a sheet; None where nothing does."""
+    for step in steps:
         try:
             tree = tree[step]
         except (KeyError, IndexError, TypeError):
@@ -445,12 +447,12 @@ def _impossible_serial(serial: Serial) -> Iterator[tuple[str, str, str]]:
         if not 1 <= field.bits <= LONGEST_FIELD:
             yield f"{path}.bits", "an impossible width", f"1 to {LONGEST_FIELD}"
         yield from _impossible_key(field, path)
-        yield from _impossible_check(serial, number, path)
         for covered in field.covers or ():
             if covered not in names:
                 nearest = maybe_nearest(covered, names)
                 hint = f"; did you mean {nearest!r}?" if nearest else ""
                 yield f"{path}.covers", f"no field named {covered!r}{hint}", ", ".join(names)
+        yield from _impossible_check(serial, number, path)
     if serial.coding == "gray" and "position" not in names:
         yield "serial.coding", "gray without a position", "a field named position"
     if serial.position_bits + serial.turns_bits > LONGEST_FIELD - 1:
@@ -467,7 +469,7 @@ def _impossible_key(field: Field, path: str) -> Iterator[tuple[str, str, str]]:
             yield (
                 f"{path}.{key.name}",
                 f"a field named {field.name!r} has no {key.name}",
-                f"name = {' or '.join(names)}",
+                f"a field named {' or '.join(names)}",
             )
 
 

@@ -25,6 +25,9 @@ BoolArray = npt.NDArray[np.bool_]
 
 LOW, HIGH, UNKNOWN = 0, 1, 2
 
+NO_TICK = np.iinfo(np.int64).min
+"""Stands in a column of ticks where there is none: any other number, also a negative one, is a time."""
+
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Edges:

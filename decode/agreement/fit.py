@@ -337,20 +337,22 @@ def _settle(
     target = frames.counted - frames.counted[0] - frames.sense * per_turn * (frames.turns - frames.turns[0])
     floor = frames.serial_unit / np.sqrt(12)
     columns = int(with_scale) + int(with_speed) + 2 * harmonics
-    starts = np.union1d([0], frames.borders) if begin is None else begin.starts
+    borders = _borders(frames)
+    starts = borders if begin is None else begin.starts
     inlier = _near_neighbours(frames, target) if begin is None else begin.inlier
     noise = floor if begin is None else begin.noise
     share, cell = _own_share(frames), _cells(frames)
     for left in reversed(range(MOST_ROUNDS)):
         weight = np.where(inlier, share * noise**2 / (noise**2 + frames.uncertainty**2 / 3), 0.0)
-        fitted = regression.fit(target, design, columns, weight, starts, cell, floor)
+        blocks = joint.blocks_of(target, design, columns, weight, starts, frames.time)
+        tried = np.union1d(starts, joint.steps_in(blocks, floor, frames.unit)) if left else starts
+        fitted = regression.fit(target, design, columns, weight, tried, cell, floor)
         along = fitted.residual + fitted.levels[fitted.segment]
-        fresh = _segments(frames, along) if left else starts
-        off = along - _levels(along, frames.held, fresh)
-        kept = _fitting(frames, off, floor) if left else inlier
+        fresh, kept, passing = _segments(frames, along, tried, floor) if left else (starts, inlier, passing)
         unchanged = np.array_equal(fresh, starts) and np.array_equal(kept, inlier)
+        off = along - _levels(along, frames.held, fresh)
         starts, inlier, noise = fresh, kept, _noise(frames, off, floor)
-        if unchanged:
+        if unchanged and np.array_equal(tried, starts):
             break
     return _Settled(fitted, per_turn, with_scale, with_speed, starts, inlier, noise)
 
@@ -367,12 +369,34 @@ def _cells(frames: _Frames) -> IntArray:
     return np.asarray(np.minimum(frames.in_turn * per_turn, per_turn - 1).astype(np.int64))
 
 
-def _segments(frames: _Frames, along: FloatArray) -> IntArray:
-    """First row of every segment: those of the capture's stretches, and the steps."""
+def _borders(frames: _Frames) -> IntArray:
+    """First row of every stretch of the capture, and of what follows each break."""
+    return np.union1d(np.union1d([0], frames.borders), frames.breaks).astype(np.int64)
+
+
+def _segments(
+    frames: _Frames, along: FloatArray, tried: IntArray, floor: float
+) -> tuple[IntArray, BoolArray, BoolArray]:
+    """First row of every segment, the frames that are on their level, and those on their way to another."""
     sound = np.flatnonzero(~frames.held)
-    borders = np.searchsorted(sound, frames.borders)
-    begun = steps.find(along[sound], frames.counted[sound], frames.unit, frames.serial_unit, borders)
-    return np.union1d(np.union1d([0], frames.borders), sound[begun]).astype(np.int64)
+    fixed = _borders(frames)
+
+    def among(rows: IntArray) -> IntArray:
+        return np.searchsorted(sound, rows[rows > 0])
+
+    begun = steps.find(
+        along[sound], frames.counted[sound], frames.unit, frames.serial_unit, among(fixed), among(tried)
+    )
+    starts = np.union1d(fixed, sound[begun]).astype(np.int64)
+    off = along - _levels(along, frames.held, starts)
+    kept = _fitting(frames, off, floor)
+    ends = steps.end_runs(off, ~kept & ~frames.held, np.union1d([0], frames.borders), _tolerance(frames, off, floor))
+    if ends.size:
+        starts = np.union1d(starts, ends).astype(np.int64)
+        off = along - _levels(along, frames.held, starts)
+        kept = _fitting(frames, off, floor)
+    inner = np.setdiff1d(starts[1:], frames.borders)
+    return starts, kept, steps.passing(along, ~kept & ~frames.held, starts, inner)
 
 
 def _noise(frames: _Frames, off: FloatArray, floor: float) -> float:
@@ -381,8 +405,12 @@ def _noise(frames: _Frames, off: FloatArray, floor: float) -> float:
 
 def _fitting(frames: _Frames, off: FloatArray, floor: float) -> BoolArray:
     """The frames that are on their level."""
-    tolerance = max(TOLERANCE * _noise(frames, off, floor), 1.5 * frames.unit) + 2 * frames.uncertainty
+    tolerance = _tolerance(frames, off, floor) + 2 * frames.uncertainty
     return np.asarray((np.abs(off) <= tolerance) & ~frames.held, np.bool_)
+
+
+def _tolerance(frames: _Frames, off: FloatArray, floor: float) -> float:
+    return max(TOLERANCE * _noise(frames, off, floor), 1.5 * frames.unit)
 
 
 def _middle(frames: _Frames) -> float:

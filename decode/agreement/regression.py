@@ -80,7 +80,7 @@ def fit(
     weights = sums[:, -1]
     means = sums[:, :-1] / np.where(weights > 0, weights, 1.0)[:, np.newaxis]
     products -= (means * weights[:, np.newaxis]).T @ means
-    inverse = _inverse(products[:-1, :-1])
+    inverse = invert(products[:-1, :-1])
     coefficients = inverse @ products[:-1, -1]
     levels = means[:, -1] - means[:, :-1] @ coefficients
     residual, sandwiches, together = _second_pass(
@@ -135,7 +135,7 @@ def _few(groups: int) -> float:
     return groups / max(1, groups - 1)
 
 
-def _inverse(products: FloatArray) -> FloatArray:
+def invert(products: FloatArray) -> FloatArray:
     """Inverse of a Gram matrix; a column that does not vary, or only as others do, is given no say."""
     scale = np.sqrt(np.maximum(np.diag(products), 0))
     scale = np.where(scale > 0, scale, 1.0)

@@ -1,13 +1,14 @@
 """Channels that say nothing any more.
 
-A or B without an edge to the capture's end is only wrong where something else shows that the shaft turns: the other
-channel goes on for many edges (chatter at a standstill makes a few), or the serial position travels on. From then on
-the count means nothing, and is not compared with anything.
+A or B without an edge to the capture's end is only wrong where something else shows that the shaft turns: the serial
+position travels on or, where there is none, the other channel goes on for many edges at an even pace. A shaft parked
+on an edge makes one channel chatter too, but never evenly. From then on the count means nothing, and is not compared
+with anything.
 """
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 
 import numpy as np
 
@@ -15,8 +16,10 @@ from decode.lines.activity import LineActivity
 from decode.serial.frames import Frames
 
 PARTNER_EDGES = 64
-"""Edges of the other channel without one of this channel, to the capture's end, that make it silent; four are enough
-where it never had any (common practice, no source)."""
+EVEN = 3.0
+"""So many edges of the other channel to the capture's end, without one of this channel, make it silent where their
+spacing is even: the longest but a tenth is no more than EVEN times the shortest but a tenth (common practice, no
+source)."""
 
 SILENT_TURNS = 1 / 16
 """Serial travel without an edge of the channel, to the capture's end, that makes it silent (common practice, no
@@ -39,12 +42,19 @@ def silent_channels(
     for role, partner in (("a", "b"), ("b", "a")):
         line = activity[lines[role]]
         since = start if line.last is None else line.last
-        alone = line.partner_edges[lines[partner]]
-        few = 4 if line.edges == 0 else PARTNER_EDGES
-        travelled = 0.0 if frames is None else _travel(frames, since, modulus) / positions_per_turn
-        if alone >= few or travelled > SILENT_TURNS:
+        if frames is not None:
+            stopped = _travel(frames, since, modulus) > SILENT_TURNS * positions_per_turn
+        else:
+            stopped = line.partner_edges[lines[partner]] >= PARTNER_EDGES and _is_even(activity[lines[partner]].recent)
+        if stopped:
             silent[role] = since
     return silent
+
+
+def _is_even(times: Sequence[int]) -> bool:
+    spacing = np.diff(times)[-PARTNER_EDGES + 1 :]
+    short, long = np.percentile(spacing, [10, 90])
+    return bool(long <= EVEN * short)
 
 
 def _travel(frames: Frames, tick: int, modulus: int) -> float:

@@ -26,6 +26,13 @@ from decode.spans import BoolArray, IntArray
 SAMPLES_NEEDED = 4
 """Samples in a clock period and in an A/B state below which nothing is decided (common practice, no source)."""
 
+READABLE = 3.5
+"""Samples in a clock period below which clock edges can be missed, so that no frame can be judged: below two they
+alias, and look like two to three (sampling theorem)."""
+
+AGREES_WITHIN = 1.5
+"""Counts within which the serial position bears the count of a turn out (common practice, no source)."""
+
 STUCK_FRAMES = 10
 """A data line that is stuck for the last so many frames counts as stuck for good."""
 
@@ -63,8 +70,12 @@ def _fold(evidence: Evidence, found: Docket) -> None:
     illegal = ticks_of(found.of("illegal_transition"))
     if illegal.size:
         _fold_illegal(evidence, found, illegal)
+    _fold_spikes(evidence, found)
+    _many_index(evidence, found)
     _move_index(evidence, found)
     _fold_turns(found)
+    if found.has("illegal_transition", "turn_count_wrong") and _turns_are_right(evidence):
+        found.withdraw(("scale_wrong", "residual_high"))
     if found.has("direction_opposed", "scale_wrong"):
         found.withdraw(("residual_high", "latency_high"))
     if found.has("direction_opposed"):
@@ -78,8 +89,10 @@ def too_coarse(evidence: Evidence) -> list[str]:
     """The roles ("clock", "a") whose edges come too fast for the sampling."""
     step, coarse = evidence.capture.grid, []
     if evidence.serial is not None:
-        periods = evidence.serial.timings["clock_period"]
-        if periods.n and periods.percentile(50) < SAMPLES_NEEDED * step:
+        periods, rhythm = evidence.serial.timings["clock_period"], evidence.serial.rhythm
+        phases = 0.0 if rhythm is None else min(rhythm.high, rhythm.low)
+        slow = periods.n > 0 and periods.percentile(50) < SAMPLES_NEEDED * step
+        if slow or (rhythm is not None and phases <= SAMPLES_NEEDED / 2 * step):
             coarse.append("clock")
     result = evidence.incremental
     if result is not None and result.edges:
@@ -96,9 +109,12 @@ def too_coarse(evidence: Evidence) -> list[str]:
 def _add_coarse(evidence: Evidence, found: Docket, role: str) -> None:
     if role == "clock":
         assert evidence.serial is not None
+        period = (evidence.serial.rhythm.period if evidence.serial.rhythm else 0.0) / evidence.capture.grid
         withdrawn = found.withdraw(OF_SERIAL_TIMING)
-        period = evidence.serial.timings["clock_period"].percentile(50)
-        samples = {"samples_per_period": [round(period / evidence.capture.grid, 2)]}
+        withdrawn += found.withdraw(("glitch",), of_line(evidence.lines["data"]))
+        if period < READABLE:
+            withdrawn += found.withdraw(OF_SERIAL)
+        samples = {"samples_per_period": [round(period, 2)]}
         first = evidence.serial.frames.first_edge[:1]
     else:
         withdrawn = found.withdraw((*OF_EDGES, "offset_step"))
@@ -237,20 +253,20 @@ def _move_index(evidence: Evidence, found: Docket) -> None:
     if agreement is None or agreement.serial_turns is None or agreement.scale_wrong or serial is None:
         return
     assert result is not None
-    known = np.flatnonzero(np.isfinite(agreement.serial_turns))
-    if known.size == 0 or result.index is None:
+    turn = evidence.counts_per_turn()
+    known = np.isfinite(agreement.serial_turns)
+    if not known.any() or result.index is None or turn is None:
         return
-    first, last = int(serial.frames.latch[known[0]]), int(serial.frames.latch[known[-1]])
+    latches, serial_turns = serial.frames.latch[known].astype(np.float64), agreement.serial_turns[known]
 
     def borne_out(one: Anomalies) -> BoolArray:
         start, stop = (np.asarray(one.evidence[name], np.int64) for name in ("start_ticks", "stop_ticks"))
-        slack = (stop - start) // 8
-        steps = agreement.steps.time[None, :]
-        stepped = (steps >= (start - slack)[:, None]) & (steps <= (stop + slack)[:, None])
-        return np.asarray((start >= first) & (stop <= last) & ~stepped.any(axis=1), np.bool_)
+        travelled = np.abs(np.interp(stop, latches, serial_turns) - np.interp(start, latches, serial_turns)) * turn
+        inside = (start >= latches[0]) & (stop <= latches[-1])
+        return np.asarray(inside & (np.abs(travelled - np.asarray(one.evidence["counts"])) < AGREES_WITHIN), np.bool_)
 
-    if found.withdraw(("turn_count_wrong",), borne_out):
-        rises = _displaced(evidence, found)
+    rises = _displaced(evidence, found)
+    if rises.size and found.withdraw(("turn_count_wrong",), borne_out):
         causes = ["the count agrees with the serial position over these turns, so the index moved"] * rises.size
         found.add(Anomalies("index_misplaced", rises, line=evidence.lines.get("index"), causes=causes))
 
@@ -266,12 +282,63 @@ def _displaced(evidence: Evidence, found: Docket) -> IntArray:
     table = result.index
     right = np.array([role == "index" for role in table.role], np.bool_) & ~table.turned
     middle = (table.rise_ticks + table.fall_ticks)[right] / 2
+    if middle.size == 0:
+        return np.empty(0, np.int64)
     turns = np.interp(middle, serial.frames.latch[known].astype(np.float64), agreement.serial_turns[known])
     apart = (turns[:, None] - turns[None, :] + 0.5) % 1.0 - 0.5
     usual = int(np.argmin(np.median(np.abs(apart), axis=0)))
     off = np.abs(apart[:, usual]) > 1.5 / turn
     rises = table.rise_ticks[right][off]
     return np.setdiff1d(rises, ticks_of([*found.of("index_misplaced"), *found.of("index_extra")]))
+
+
+def _turns_are_right(evidence: Evidence) -> bool:
+    """Whether most turns, index to index, have the counts of the sheet."""
+    assert evidence.incremental is not None
+    told = evidence.incremental.distributions["counts_per_turn"]
+    return told.n > 0 and evidence.sheet.incremental is not None and told.percentile(50) == evidence.counts_per_turn()
+
+
+def _fold_spikes(evidence: Evidence, found: Docket) -> None:
+    """A spike on the data line within a faulty frame is part of what spoilt it."""
+    serial, data = evidence.serial, evidence.lines.get("data")
+    if serial is None or len(serial.frames) == 0:
+        return
+
+    def spoilt(one: Anomalies) -> BoolArray:
+        frame = np.maximum(np.searchsorted(serial.frames.first_edge, one.times, side="right") - 1, 0)
+        beside = np.minimum(frame + 1, len(serial.frames) - 1)
+        faulty = serial.frames.kind != 0
+        return np.asarray((faulty[frame] | faulty[beside]) & (one.line == data), np.bool_)
+
+    found.withdraw(("glitch",), spoilt)
+
+
+def _many_index(evidence: Evidence, found: Docket) -> None:
+    """Several index pulses at equal distances in each turn are one finding: by design, or one a pole pair."""
+    result, turn = evidence.incremental, evidence.counts_per_turn()
+    if result is None or turn is None or evidence.lines.get("index") is None:
+        return
+    told = result.distributions["counts_per_turn"]
+    agreement = evidence.agreement
+    borne_out = agreement is not None and agreement.scale_error is not None and not agreement.scale_wrong
+    if told.n < 2 or not borne_out or not found.has("turn_count_wrong"):
+        return
+    between = told.percentile(50)
+    number = round(turn / between)
+    if number >= 2 and abs(turn / number - between) <= 1:
+        time = ticks_of(found.of("turn_count_wrong"))[:1]
+        found.withdraw(("turn_count_wrong", "index_misplaced", "index_extra", "index_missing"))
+        cause = f"{number} index pulses in a turn, evenly spaced: by design, or one for each pole pair"
+        found.add(
+            Anomalies(
+                "index_extra",
+                time,
+                line=evidence.lines["index"],
+                causes=[cause],
+                evidence={"pulses_per_turn": [number], "counts_between": [between]},
+            )
+        )
 
 
 def _fold_turns(found: Docket) -> None:

@@ -64,6 +64,9 @@ def _capture(evidence: Evidence, sorted_out: Docket) -> CaptureRecord:
         notes += evidence.serial.notes
     if evidence.agreement is not None:
         notes += evidence.agreement.notes
+    sheet = evidence.sheet.serial
+    if sheet is not None and sheet.position_bits == 0:
+        notes.append("no field is named position, so nothing is compared with the count and no jump can be found")
     if sorted_out.withdrawn:
         told = ", ".join(f"{number} {kind}" for kind, number in sorted(sorted_out.withdrawn.items()))
         notes.append(f"not listed, since they follow from what is: {told}")

@@ -13,6 +13,9 @@ import numpy as np
 
 from decode.spans import HIGH, LOW, Edges, Span
 
+RECENT = 65
+"""Edges of a line that are remembered."""
+
 
 @dataclass(slots=True)
 class LineActivity:
@@ -20,13 +23,14 @@ class LineActivity:
 
     level_at_start: 0, 1 or 2 for unknown. edges: their number. first, last: ticks of its first and last edge, None
     without one. high_ticks, low_ticks: how long it was seen at each level. partner_edges: for each partner, its edges
-    after this line's last one (all of them where this line has none).
+    after this line's last one (all of them where this line has none). recent: ticks of its last edges.
     """
 
     level_at_start: int
     edges: int = 0
     first: int | None = None
     last: int | None = None
+    recent: list[int] = field(default_factory=list)
     high_ticks: int = 0
     low_ticks: int = 0
     partner_edges: dict[str, int] = field(default_factory=dict)
@@ -69,6 +73,7 @@ def _add_edges(line: LineActivity, edges: Edges) -> None:
         line.edges += edges.times.size
         line.first = int(edges.times[0]) if line.first is None else line.first
         line.last = int(edges.times[-1])
+        line.recent = [*line.recent, *edges.times[-RECENT:].tolist()][-RECENT:]
 
 
 def _add_times(line: LineActivity, edges: Edges, span: Span) -> None:

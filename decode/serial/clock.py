@@ -11,12 +11,14 @@ Edges in a burst alternate, so the k-th leading edge (away from rest) is edge 2k
 
 from __future__ import annotations
 
+import itertools
+from collections.abc import Iterator
 from dataclasses import dataclass, fields, replace
 
 import numpy as np
 import numpy.typing as npt
 
-from decode.spans import BoolArray, Edges, IntArray
+from decode.spans import NO_TICK, BoolArray, Edges, IntArray
 
 PILOT_EDGES = 4096
 """How many clock edges the rhythm is learnt from: some 50 frames, and a small part of any capture."""
@@ -27,8 +29,8 @@ SHORT_PULSE = 0.5
 LONE_BURST_PERIODS = 4
 """Idle time, in clock periods, that ends a burst where the pilot holds only one (common practice, no source)."""
 
-SINCE_EVER = np.iinfo(np.int64).min
-"""Tick of a select edge that lies before the stretch begins."""
+LONGEST_RINGING = 16
+"""Edges in a run of short intervals that is looked at pulse by pulse; a longer one is a clock that got faster."""
 
 Index = npt.NDArray[np.intp]
 
@@ -53,9 +55,9 @@ class Rhythm:
     def of(cls, clock: Edges) -> Rhythm | None:
         """Learn from the first edges of a clock; None where there are too few to tell (fewer than four)."""
         times, levels = clock.times[:PILOT_EDGES], clock.levels[:PILOT_EDGES]
-        if times.size < 4:
-            return None
         lengths, at = np.diff(times), levels[:-1]
+        if times.size < 4 or not (at == 1).any() or not (at == 0).any():
+            return None
         high, low = (float(np.median(lengths[at == level])) for level in (1, 0))
         period = high + low
         if high > 8 * low or low > 8 * high:  # a few short bursts: the medians are pauses
@@ -90,8 +92,8 @@ class Bursts:
 
     times: (e,) ticks of all edges kept. first, count: (n,) where each burst begins in `times` and how many edges it
     has. opens: (n,) tick at which its window begins: the select line's, else its first clock edge. selected: (n,)
-    tick at which the select line chose it, or -1. glitches: (n,) short pulses taken out of each. glitch_time: (n,)
-    tick of the first of them, or -1. gap: (n,) longest pause inside a burst that should have ended it, 0 for none.
+    tick at which the select line chose it, or NO_TICK. glitches: (n,) short pulses taken out of each. glitch_time: (n,)
+    tick of the first of them, or NO_TICK. gap: (n,) longest pause inside a burst that should have ended it, 0 for none.
     """
 
     times: IntArray
@@ -120,10 +122,10 @@ class Bursts:
         return replace(self, **rows)
 
     def edge(self, numbers: Index) -> IntArray:
-        """(n, m) tick of edge number numbers[m] of each burst; -1 where the burst is over by then."""
+        """(n, m) tick of edge number numbers[m] of each burst; NO_TICK where the burst is over by then."""
         wanted = self.first[:, None] + numbers[None, :]
         inside = numbers[None, :] < self.count[:, None]
-        return np.where(inside, self.times[np.where(inside, wanted, 0)], np.int64(-1))
+        return np.where(inside, self.times[np.where(inside, wanted, 0)], np.int64(NO_TICK))
 
     def rejoined(self, edges: int, pause: float) -> Bursts:
         """Neighbouring pieces that make up one burst of `edges` edges, less than `pause` ticks apart, put together."""
@@ -138,9 +140,43 @@ class Bursts:
                 keep[pair + 1] = False
                 count[pair], gaps[pair] = edges, gap[pair]
                 glitches[pair] += glitches[pair + 1]
-                glitch_time[pair] = max(glitch_time[pair], glitch_time[pair + 1])
+                glitch_time[pair] = glitch_time[pair + (glitch_time[pair] == NO_TICK)]
         joined = replace(self, count=count, gap=gaps, glitches=glitches, glitch_time=glitch_time)
         return joined.take(keep)
+
+    def parted(self, edges: int, least: float) -> Bursts:
+        """Bursts of k times `edges` edges that rest for more than `least` ticks at every word's end, taken apart.
+
+        A burst that follows so soon comes before the encoder's time-out has run out, but it is a burst of its own.
+        """
+        words = np.where(self.count % max(edges, 1) == 0, self.count // max(edges, 1), 1)
+        for k in np.unique(words[words > 1]):
+            rows = np.flatnonzero(words == k)
+            border = self.first[rows, None] + edges * np.arange(1, k)[None, :]
+            rested = (self.times[border] - self.times[border - 1] > least).all(axis=1)
+            words[rows[~rested]] = 1
+        if (words == 1).all():
+            return self
+        row = np.repeat(np.arange(len(self)), words)
+        number = np.arange(row.size) - np.repeat(np.cumsum(words) - words, words)
+        apart = self.take(row)
+        later, first = number > 0, apart.first + edges * number
+        return replace(
+            apart,
+            first=first.astype(np.intp),
+            count=np.where(words[row] > 1, edges, apart.count).astype(np.intp),
+            opens=np.where(later, self.times[first], apart.opens),
+            glitches=np.where(later, 0, apart.glitches),
+            glitch_time=np.where(later, NO_TICK, apart.glitch_time),
+        )
+
+    def longest(self) -> IntArray:
+        """(n,) the longest time between two neighbouring edges of each burst."""
+        if len(self) == 0:
+            return self.opens
+        lengths = np.diff(self.times, append=self.times[-1:])
+        bounds = np.stack([self.first, self.first + self.count - 1], axis=1)  # no edge that follows is part of it
+        return np.where(self.count > 1, np.maximum.reduceat(lengths, bounds.ravel())[::2], 0)
 
     def last_may_grow(self, edges: int, pause: float) -> bool:
         """Whether the last burst but one may turn out to be the first piece of a burst of `edges` edges."""
@@ -161,13 +197,13 @@ def find_bursts(clock: Edges, select: Edges | None, rhythm: Rhythm) -> tuple[Bur
         starts = _resting_starts(clock, rhythm)
         stops = np.concatenate([starts[1:], [clock.times.size]]).astype(np.intp)[: starts.size]
         opens = clock.times[starts]
-        selected = np.full(starts.size, -1, np.int64)
+        selected = np.full(starts.size, NO_TICK, np.int64)
     else:
         down, up = _windows(select, rhythm)
         starts, stops = (np.searchsorted(clock.times, edge, side="left") for edge in (down, up))
         busy = stops > starts
         starts, stops = starts[busy], stops[busy]
-        unseen = down[busy] == SINCE_EVER
+        unseen = down[busy] == NO_TICK
         opens = np.where(unseen, clock.times[starts], down[busy])
         selected = opens
     return _clean(clock.times, starts, stops, opens, selected, rhythm)
@@ -181,16 +217,24 @@ def _resting_starts(clock: Edges, rhythm: Rhythm) -> Index:
     return np.concatenate([[0], np.flatnonzero(resting) + 1]).astype(np.intp)
 
 
+def short_pulses(edges: Edges, least: float) -> IntArray:
+    """Ticks at which the line begins to change faster than `least` ticks, one for each such run of edges."""
+    short = np.diff(edges.times) < least
+    return np.asarray(edges.times[:-1][short & ~np.concatenate([[False], short[:-1]])], np.int64)
+
+
 def _windows(select: Edges, rhythm: Rhythm) -> tuple[IntArray, IntArray]:
     """Falling and rising ticks of the select line; pulses shorter than a clock phase do not count."""
-    times, levels = select.times, select.levels
-    if times.size > 1:
-        short = np.flatnonzero(np.diff(times) < SHORT_PULSE * min(rhythm.high, rhythm.low))
-        drop = np.unique(np.concatenate([short, short + 1]))
-        times, levels = np.delete(times, drop), np.delete(levels, drop)
-    down, up = times[levels == 0], times[levels == 1]
+    least = SHORT_PULSE * min(rhythm.high, rhythm.low)
+    short = np.append(np.diff(select.times) < least, False)[: select.times.size]
+    drop = [edge for spike in _spikes(select.times, short, least) for edge in spike]
+    times, levels = np.delete(select.times, drop), np.delete(select.levels, drop)
+    down: IntArray = times[levels == 0]
+    up: IntArray = times[levels == 1]
+    if select.initial != 0:  # a rise ends a window only where one is open
+        up = up[np.searchsorted(up, down[:1]).sum() :]
     if select.initial == 0:  # selected before the stretch begins: open since ever
-        down = np.concatenate([[SINCE_EVER], down])
+        down = np.concatenate([[NO_TICK], down])
     if up.size < down.size:
         up = np.concatenate([up, [np.iinfo(np.int64).max]])
     return down, up[: down.size]
@@ -199,33 +243,48 @@ def _windows(select: Edges, rhythm: Rhythm) -> tuple[IntArray, IntArray]:
 def _clean(
     times: IntArray, starts: Index, stops: Index, opens: IntArray, selected: IntArray, rhythm: Rhythm
 ) -> tuple[Bursts, IntArray]:
-    """Bursts of `times` [starts, stops) without the pulses that are too short to be real.
-
-    In a run of short intervals the edges go in pairs from the end, so that ringing after a true edge leaves the true
-    edge, and a lone pulse leaves nothing.
-    """
+    """Bursts of `times` [starts, stops) without the pulses that are too short to be real."""
     inside = np.zeros(times.size + 1, np.int64)
     np.add.at(inside, starts, 1)
     np.add.at(inside, stops, -1)
     keep = np.asarray(np.cumsum(inside)[:-1] > 0, np.bool_)  # edges outside every select window go first
+    least = SHORT_PULSE * min(rhythm.high, rhythm.low)
     short = np.zeros(times.size, np.bool_)  # the interval from this edge to the next, within one burst
     if times.size:
-        short[:-1] = np.diff(times) < SHORT_PULSE * min(rhythm.high, rhythm.low)
+        short[:-1] = np.diff(times) < least
     short[stops - 1] = False
     short &= keep
-    glitches, glitch_time = np.zeros(starts.size, np.int64), np.full(starts.size, -1, np.int64)
-    if short.any():
-        run_first = np.flatnonzero(short & ~np.concatenate([[False], short[:-1]]))
-        run_last = np.flatnonzero(short & ~np.concatenate([short[1:], [False]])) + 1
-        burst = np.searchsorted(starts, run_first, side="right") - 1
-        for first, last, number in zip(run_first, run_last, burst, strict=True):
-            odd = (last - first + 1) % 2
-            keep[first + odd : last + 1] = False
-            glitches[number] += (last - first + 1) // 2
-            if glitch_time[number] < 0:
-                glitch_time[number] = times[first + odd]
+    glitches, glitch_time = np.zeros(starts.size, np.int64), np.full(starts.size, NO_TICK, np.int64)
+    for up, down in _spikes(times, short, least):
+        number = int(np.searchsorted(starts, up, side="right")) - 1
+        keep[[up, down]] = False
+        glitches[number] += 1
+        if glitch_time[number] == NO_TICK or times[up] < glitch_time[number]:
+            glitch_time[number] = times[up]
     kept_before = np.concatenate([[0], np.cumsum(keep)])
     begin, end = kept_before[starts].astype(np.intp), kept_before[stops].astype(np.intp)
     bursts = Bursts(times[keep], begin, end - begin, opens, selected, glitches, glitch_time, np.zeros_like(opens))
     real = bursts.count > 0
     return bursts.take(real), glitch_time[~real & (glitches > 0)]
+
+
+def _spikes(times: IntArray, short: BoolArray, least: float) -> Iterator[tuple[int, int]]:
+    """The pairs of edges that make up pulses shorter than `least`; `short` says which intervals after an edge are.
+
+    The shortest pulse of a run goes first, of equal ones the last: so a spike ahead of a true edge goes and the edge
+    stays, and ringing after a true edge leaves the true edge.
+    """
+    run_first = np.flatnonzero(short & ~np.concatenate([[False], short[:-1]])[: short.size])
+    run_last = np.flatnonzero(short & ~np.concatenate([short[1:], [False]])[: short.size]) + 1
+    for first, last in zip(run_first.tolist(), run_last.tolist(), strict=True):
+        left = list(range(first, last + 1))
+        if len(left) > LONGEST_RINGING:
+            odd = len(left) % 2
+            yield from zip(left[odd::2], left[odd + 1 :: 2], strict=True)
+            continue
+        while len(left) > 1:
+            widths = [int(times[after] - times[before]) for before, after in itertools.pairwise(left)]
+            narrowest = min(reversed(range(len(widths))), key=widths.__getitem__)
+            if widths[narrowest] >= least:
+                break
+            yield left.pop(narrowest), left.pop(narrowest)

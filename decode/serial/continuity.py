@@ -16,10 +16,13 @@ from decode.serial.frames import CODE, Frames
 from decode.sheet import Serial
 from decode.spans import BoolArray, FloatArray, IntArray
 
-STEADY_SHARE = 0.6
 STEADY_SPREAD = 0.2
-"""A cadence is judged where this share of the frame periods lies within this part of the median (common practice,
-no source)."""
+STEADY_SHARE = 0.75
+WHOLE_SHARE = 0.95
+LONGEST_SKIP = 3
+"""An unstated cadence is believed where STEADY_SHARE of the frame periods lie within STEADY_SPREAD of the median, and
+WHOLE_SHARE of them as near to a whole multiple of it, half of the longer ones to one of no more than LONGEST_SKIP: a
+master that reads in groups skips nothing (common practice, no source)."""
 
 SPOILT_BY_STUCK_DATA = (
     "no_acknowledge",
@@ -61,19 +64,41 @@ def cadence(frames: Frames, stated: float | None) -> Cadence:
     if usual.size == 0:
         return Cadence(stated, usual, none, none)
     period = stated
-    if period is None and usual.size >= 3:
-        median = float(np.median(usual))
-        if np.mean(np.abs(usual - median) <= STEADY_SPREAD * median) >= STEADY_SHARE:
-            period = median
+    if period is None and usual.size >= 3 and _is_steady(usual):
+        period = float(np.median(usual))
     if period is None:
         return Cadence(None, usual, none, none)
     skipped = np.where(joined, np.rint(steps / period).astype(np.int64) - 1, 0)
-    skipped = np.where(steps > 1.5 * period, skipped, 0)
+    skipped = np.where(steps > 1.5 * period, skipped - _displaced(steps, period), 0)
     where = np.flatnonzero(skipped > 0)
     after = np.repeat(where, skipped[where])
     number = np.arange(after.size) - np.repeat(np.cumsum(skipped[where]) - skipped[where], skipped[where]) + 1
     due = frames.first_edge[after] + np.rint(number * (steps[after] / (skipped[after] + 1))).astype(np.int64)
     return Cadence(period, usual[skipped[joined] == 0], due, after.astype(np.int64))
+
+
+def _is_steady(steps: IntArray) -> bool:
+    ratio = steps / np.median(steps)
+    whole = np.maximum(np.rint(ratio), 1.0)
+    near = np.abs(ratio - whole) <= STEADY_SPREAD
+    longer = whole[near & (whole > 1)]
+    return bool(
+        np.mean(near & (whole == 1)) >= STEADY_SHARE
+        and np.mean(near) >= WHOLE_SHARE
+        and (longer.size == 0 or np.median(longer) <= LONGEST_SKIP)
+    )
+
+
+def _displaced(steps: IntArray, period: float) -> IntArray:
+    """(n - 1,) 1 where the frame at either end of a step came at the wrong time, but came."""
+    early = np.concatenate([[False], steps[:-1] < 0.5 * period])
+    late = np.concatenate([steps[1:] < 0.5 * period, [False]])
+    before = np.concatenate([[0], steps[:-1]])
+    after = np.concatenate([steps[1:], [0]])
+    both = np.where(early, steps + before, steps + after)
+    whole = np.abs(both / period - np.rint(both / period)) <= STEADY_SPREAD
+    came = (early | late) & whole & (np.rint(both / period) < np.rint(steps / period) + 1)
+    return np.asarray(came, np.int64)
 
 
 def life_breaks(frames: Frames, serial: Serial, missing_after: IntArray) -> BoolArray:

@@ -48,7 +48,8 @@ class Frames:
     name. position: (n,) turns and position as one binary word. usable: (n,) whether the position can be believed.
     crc_ok: (n,) 1, 0, or -1 without a CRC. kind: (n,) number in FRAME_KINDS, 0 for none. segment: (n,) rises by one
     where the capture is broken between two frames. least_setup: (n,) shortest setup time or -1.
-    pause: (n,) ticks since the last clock edge before, or -1. glitch_time: (n,) tick of a short clock pulse or -1.
+    pause: (n,) ticks since the last clock edge before, or -1. glitch_time: (n,) tick of a short clock pulse or
+    NO_TICK.
     gap: (n,) ticks of a pause inside the burst, 0 for none. wrong: (n,) which field fails (number in the sheet's
     list), or -1. warned: (n,) whether the warning bit is set. quiet: (n,) no edge of data in
     the burst and the pause after it.

@@ -27,7 +27,7 @@ import numpy.typing as npt
 
 from decode.serial.clock import Bursts, Index, Rhythm
 from decode.sheet import Serial
-from decode.spans import UNKNOWN, BoolArray, Edges, IntArray, LevelArray
+from decode.spans import NO_TICK, UNKNOWN, BoolArray, Edges, IntArray, LevelArray
 
 LATE_PHASE = 0.4
 """Data that changes later than this part of a period after its clock edge is sampled half a period after it changes
@@ -60,7 +60,8 @@ class Reading:
     """What was read from n bursts.
 
     bursts: the n bursts, without clock edges that are none of the word's.
-    drive, sample: (n, m) ticks at which bit m is driven and sampled, -1 where it is not. levels: (n, m) data level at
+    drive, sample: (n, m) ticks at which bit m is driven and sampled, NO_TICK where it is not.
+    levels: (n, m) data level at
     each sample. bits: (n, sent_bits), 0 where not read. complete: (n,) whether every bit of the word was read.
     acknowledged, started: (n,) as far as the interface has such a thing. clocks, latch, trailing: (n,). stop: (n,)
     level of the bit after the word. over: (n,) tick at which that bit was sampled, or the last clock edge.
@@ -90,7 +91,7 @@ Reader = Callable[[Bursts, Edges, Serial, Rhythm, Habit, IntArray], Reading]
 
 def _look(data: Edges, sample: IntArray, stops: IntArray) -> LevelArray:
     """(n, m) data level at each sample; UNKNOWN where there is none or where the window is over."""
-    there = (sample >= 0) & (sample < stops[:, None])
+    there = (sample != NO_TICK) & (sample < stops[:, None])
     levels = data.level_at(sample.ravel()).reshape(sample.shape)
     return np.where(there, levels, np.int8(UNKNOWN)).astype(np.int8)
 
@@ -101,7 +102,7 @@ def read_ssi(bursts: Bursts, data: Edges, serial: Serial, rhythm: Rhythm, habit:
     drive = bursts.edge(2 * number + 1)
     after = bursts.edge(2 * number + 2)
     half = round(rhythm.phase(rhythm.rest))
-    sample = np.where(after >= 0, after, np.where(drive >= 0, drive + half, np.int64(-1)))
+    sample = np.where(after != NO_TICK, after, np.where(drive != NO_TICK, drive + half, np.int64(NO_TICK)))
     return _word_first(bursts, drive, sample, data, n, bursts.count // 2, bursts.first_edge, stops)
 
 
@@ -115,7 +116,7 @@ def read_spi(bursts: Bursts, data: Edges, serial: Serial, rhythm: Rhythm, habit:
         sample = bursts.edge(2 * number)
         drive = np.concatenate([bursts.selected[:, None], bursts.edge(2 * number[1:] - 1)], axis=1)
         clocks = (bursts.count + 1) // 2
-    latch = np.where(bursts.selected >= 0, bursts.selected, bursts.first_edge)
+    latch = np.where(bursts.selected != NO_TICK, bursts.selected, bursts.first_edge)
     return _word_first(bursts, drive, sample, data, n, clocks, latch, stops)
 
 
@@ -148,7 +149,7 @@ def _word_first(
         latch=latch,
         trailing=clocks.astype(np.int64) - n,
         stop=stop,
-        over=np.maximum(bursts.last_edge, sample[:, n] if sample.shape[1] > n else -1),
+        over=np.maximum(bursts.last_edge, sample[:, n] if sample.shape[1] > n else NO_TICK),
         acknowledge=zero,
         start=zero,
     )
@@ -156,19 +157,19 @@ def _word_first(
 
 def read_biss(bursts: Bursts, data: Edges, serial: Serial, rhythm: Rhythm, habit: Habit, stops: IntArray) -> Reading:
     n = serial.sent_bits
-    bursts, cdm = _without_control_level(bursts, rhythm)
+    bursts, cdm = _without_control_level(bursts, data, rhythm)
     clocks = (bursts.count // 2).astype(np.int64)
     most = min(int(clocks.max(initial=0)), habit.clocks + n + LONGEST_WAIT)
     number = np.arange(most + habit.late + 2)
     drive = bursts.edge(2 * number + 1)
-    last = bursts.times[bursts.first + 2 * np.maximum(clocks, 1).astype(np.intp) - 1]
+    last = bursts.times[bursts.first + np.maximum(bursts.count // 2 * 2 - 1, 0)]
     beyond = np.rint((number[None, :] - clocks[:, None] + 1) * rhythm.period).astype(np.int64)
-    extended = np.where(drive >= 0, drive, last[:, None] + beyond)
+    extended = np.where(drive != NO_TICK, drive, last[:, None] + beyond)
     late = habit.phase >= LATE_PHASE * rhythm.period
     sample = extended + round(habit.phase + rhythm.period / 2 if late else rhythm.high)
     if not late:
         falling = bursts.edge(2 * number + 2)
-        sample = np.where(falling >= 0, falling, sample)
+        sample = np.where(falling != NO_TICK, falling, sample)
     reach = number[None, :] < clocks[:, None] + habit.late
     levels = np.where(reach, _look(data, sample, stops), np.int8(UNKNOWN)).astype(np.int8)
     low = (levels == 0) & (number >= 1)
@@ -181,8 +182,8 @@ def read_biss(bursts: Bursts, data: Edges, serial: Serial, rhythm: Rhythm, habit
     last_bit = np.minimum(start + 2 + n, np.maximum(clocks + habit.late, 1) - 1).astype(np.intp)
     return Reading(
         bursts=bursts,
-        drive=np.where(reach, extended, np.int64(-1)),
-        sample=np.where(reach, sample, np.int64(-1)),
+        drive=np.where(reach, extended, np.int64(NO_TICK)),
+        sample=np.where(reach, sample, np.int64(NO_TICK)),
         levels=levels,
         bits=(read == 1).astype(np.uint8),
         complete=(read != UNKNOWN).all(axis=1),
@@ -211,15 +212,18 @@ def _from(levels: LevelArray, first: Index, count: int) -> LevelArray:
     return np.where(inside, found, np.int8(UNKNOWN)).astype(np.int8)
 
 
-def _without_control_level(bursts: Bursts, rhythm: Rhythm) -> tuple[Bursts, BoolArray]:
+def _without_control_level(bursts: Bursts, data: Edges, rhythm: Rhythm) -> tuple[Bursts, BoolArray]:
     """Bursts without the low level after the last clock that says a control bit of 1, and where there was one.
 
-    The level lasts until the data line is high again, so for longer than the time-out, which is 1.5 periods at the
-    least (BiSS Association application note AN23 as restated in a slave data sheet).
+    The level lasts until the data line is high again, so to the end of the time-out. That is 1.5 periods from the
+    last rising edge at the least (BiSS Association application note AN23 as restated in a slave data sheet), so the
+    clock is low for a high phase less: as short as that only with the data line to bear it out.
     """
     last = bursts.first + bursts.count - 1
     held = bursts.times[last] - bursts.times[np.maximum(last - 1, 0)]
-    control = (bursts.count >= 4) & (bursts.count % 2 == 0) & (held > 1.4 * rhythm.period)
+    long = held > 1.4 * rhythm.period
+    long |= (held > rhythm.low + 0.3 * rhythm.period) & (data.level_at(bursts.times[last]) == 1)
+    control = (bursts.count >= 4) & (bursts.count % 2 == 0) & long
     shorter = replace(bursts, count=(bursts.count - 2 * control).astype(np.intp))
     return shorter, control
 

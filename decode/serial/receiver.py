@@ -13,14 +13,14 @@ from dataclasses import replace
 import numpy as np
 import numpy.typing as npt
 
-from decode.anomalies import Anomalies
+from decode.anomalies import Anomalies, Severity
 from decode.distribution import Distribution
-from decode.serial.clock import PILOT_EDGES, Bursts, Rhythm, find_bursts
+from decode.serial.clock import PILOT_EDGES, SHORT_PULSE, Bursts, Rhythm, find_bursts, short_pulses
 from decode.serial.frames import Frames, Word, words
 from decode.serial.interfaces import READERS, TIMED_OUT, Habit, Reading, resting_level
 from decode.serial.timing import Samples, clock_timing, data_phase, sample_timing, time_out
 from decode.sheet import Serial
-from decode.spans import UNKNOWN, BoolArray, Edges, IntArray, Span
+from decode.spans import NO_TICK, UNKNOWN, BoolArray, Edges, IntArray, Span
 
 LEAST_SETUP = 0.1
 """A data change nearer to the sampling edge than this part of a clock period is a violation where the sheet sets no
@@ -28,6 +28,13 @@ limit (common practice, no source)."""
 
 EARLY = 0.9
 """Only a pause below this part of the usual one can be too short for the time-out (common practice, no source)."""
+
+WORD_REST = 1.5
+"""Clock periods of rest at the end of a word that make what follows a burst of its own (common practice, no source)."""
+
+SPIKE = 0.25
+"""A data pulse shorter than this part of a clock period is not real: a bit lasts a whole one (common practice, no
+source)."""
 
 PIECES = 0.5
 """Two short bursts less than this part of the usual pause apart are one burst with a pause in it, if together they
@@ -78,9 +85,11 @@ class Receiver:
         self._names = (clock, data, select)
         self._least_setup = least_setup
         self._stray: list[IntArray] = []
+        self._spikes: dict[str, list[IntArray]] = {}
         self._clock = self._data = Edges.none(UNKNOWN)
         self._select: Edges | None = None
-        self._start, self._until, self._kept, self._last_edge = 0, 0, 0, -1
+        self._start, self._until, self._kept, self._last_edge = 0, 0, 0, NO_TICK
+        self._spikes_from = 0
         self._selected_at_start = False
         self._segment = -1
         self._open = False
@@ -97,7 +106,8 @@ class Receiver:
             self._select = select if self._select is None or select is None else self._select.then(select)
         else:
             self._clock, self._data, self._select = clock, data, select
-            self._start, self._kept, self._last_edge = span.start, span.start, -1
+            self._start, self._kept, self._last_edge = span.start, span.start, NO_TICK
+            self._spikes_from = span.start
             self._selected_at_start = select is not None and select.initial == 0
             self._segment += 1
             self._open = True
@@ -132,11 +142,13 @@ class Receiver:
     def anomalies(self) -> list[Anomalies]:
         """What belongs to no frame."""
         times = np.concatenate([np.empty(0, np.int64), *self._stray])
-        if times.size == 0:
-            return []
-        return [
-            Anomalies("clock_glitch", times, line=self._names[0], causes=["a pulse between two frames"] * times.size)
-        ]
+        causes = ["a pulse between two frames"] * times.size
+        found = [Anomalies("clock_glitch", times, line=self._names[0], causes=causes)]
+        for line, spikes in self._spikes.items():
+            # Only what selects or clocks the encoder does harm by itself; a spike on data may miss every sample.
+            severity: Severity | None = "warning" if line == self._names[1] else None
+            found.append(Anomalies("glitch", np.concatenate(spikes), line=line, severity=severity))
+        return [one for one in found if len(one)]
 
     def _together(self, parts: list[Frames]) -> Frames:
         if len(parts) == 1:
@@ -164,20 +176,36 @@ class Receiver:
         opens = bursts.opens
         keep = int(opens[over]) if over < opens.size else self._until
         self._stray.append(stray[stray < keep])
+        whole = bursts.take(slice(0, over))
         if self._select is None:
-            whole = bursts.take(slice(0, over)).rejoined(2 * self.habit.clocks, self._piece_pause())
-        else:
-            whole = bursts.take(slice(0, over))
+            edges = 2 * self.habit.clocks
+            whole = whole.rejoined(edges, self._piece_pause()).parted(edges, WORD_REST * self.rhythm.period)
         stops = np.concatenate([whole.opens[1:], [keep]]).astype(np.int64)[: len(whole)]
         parts = [
             self._frames(whole.take(slice(at, at + BATCH)), stops[at : at + BATCH], self.rhythm, self.habit, closing)
             for at in range(0, len(whole), BATCH)
         ]
+        self._find_spikes(keep, closing, self.rhythm)
         self._kept = keep
         self._clock = self._clock.between(keep, self._until)
-        self._data = self._data.between(keep, self._until)
+        self._data = self._data.between(self._spikes_from, self._until)
         self._select = None if self._select is None else self._select.between(keep, self._until)
         return self._together(parts)
+
+    def _find_spikes(self, keep: int, closing: bool, rhythm: Rhythm) -> None:
+        """Pulses too short to be real on the lines that are no clock, up to where every run of them is known."""
+        horizon = self._until if closing else max(keep - round(rhythm.period), self._spikes_from)
+        for line, edges, least in (
+            (self._names[1], self._data, SPIKE * rhythm.period),
+            (self._names[2], self._select, SHORT_PULSE * min(rhythm.high, rhythm.low)),
+        ):
+            if line is None or edges is None:
+                continue
+            ticks = short_pulses(edges, least)
+            new = ticks[(ticks >= self._spikes_from) & (ticks < horizon)]
+            if new.size:
+                self._spikes.setdefault(line, []).append(new)
+        self._spikes_from = horizon
 
     def _piece_pause(self) -> float:
         assert self.rhythm is not None
@@ -186,13 +214,13 @@ class Receiver:
     def _frames(self, bursts: Bursts, stops: IntArray, rhythm: Rhythm, habit: Habit, closing: bool) -> Frames:
         """The frame table of bursts whose windows end at `stops`."""
         reading = READERS[self.serial.interface](bursts, self._data, self.serial, rhythm, habit, stops)
-        before = np.concatenate([[self._last_edge], bursts.last_edge[:-1]])
-        pause = np.where(before >= 0, bursts.first_edge - before, np.int64(-1))
+        before = np.concatenate([[self._last_edge], reading.bursts.last_edge[:-1]])
+        pause = np.where(before != NO_TICK, bursts.first_edge - before, np.int64(-1))
         whole = self._whole(reading, stops, rhythm, habit, closing)
         samples = sample_timing(reading, self._data, habit.late * rhythm.period)
         ended = time_out(reading, self._data, stops, from_rising=self.serial.interface == "biss-c")
         self.partial += int((~whole).sum())
-        self._last_edge = int(bursts.last_edge[-1])
+        self._last_edge = int(reading.bursts.last_edge[-1])
         self._measure(reading, samples, pause, ended, whole, rhythm)
         word = words(reading.bits, self.serial)
         frames = Frames(
@@ -209,21 +237,28 @@ class Receiver:
             least_setup=samples.least(),
             pause=pause,
             glitch_time=bursts.glitch_time,
-            gap=bursts.gap,
+            gap=self._pauses_inside(reading.bursts, habit),
             wrong=word.wrong,
-            warned=word.failed["warning_flag"] & reading.complete,
+            warned=word.failed["warning_flag"],
             quiet=np.searchsorted(self._data.times, bursts.opens) == np.searchsorted(self._data.times, stops),
             fields=word.fields | reading.columns,
         )
         return self._blame(frames, reading, word, samples, stops, rhythm, habit).take(whole)
 
+    def _pauses_inside(self, bursts: Bursts, habit: Habit) -> IntArray:
+        """(n,) ticks of a pause inside a burst after which the encoder has started over, 0 for none."""
+        if habit.timeout is None:
+            return bursts.gap
+        longest = bursts.longest()
+        return np.where(longest > habit.timeout, longest, bursts.gap)
+
     def _whole(self, reading: Reading, stops: IntArray, rhythm: Rhythm, habit: Habit, closing: bool) -> BoolArray:
         """(n,) whether a burst is not cut by an end of the capture, nor by a stretch of unknown level."""
         bursts = reading.bursts
-        unknown = (reading.levels == UNKNOWN) & (reading.sample >= 0) & (reading.sample < stops[:, None])
+        unknown = (reading.levels == UNKNOWN) & (reading.sample != NO_TICK) & (reading.sample < stops[:, None])
         whole = np.asarray(~unknown.any(axis=1), np.bool_)
         as_usual = reading.complete & (reading.clocks == habit.clocks)
-        if self._last_edge < 0 and not as_usual[0]:
+        if self._last_edge == NO_TICK and not as_usual[0]:
             lead = bursts.first_edge[0] - self._start
             whole[0] &= lead > rhythm.split if self._select is None else not self._selected_at_start
         if closing and stops[-1] == self._until and not as_usual[-1]:
@@ -240,7 +275,7 @@ class Receiver:
         read = whole & reading.complete
         rows = np.flatnonzero(read & reading.started)
         rise, fall = samples.edge[rows, reading.start[rows]], samples.edge[rows, reading.acknowledge[rows]]
-        held = (rise - fall)[(rise >= 0) & (fall >= 0)] if self.serial.interface == "biss-c" else rise[:0]
+        held = (rise - fall)[(rise != NO_TICK) & (fall != NO_TICK)] if self.serial.interface == "biss-c" else rise[:0]
         for name, ticks in (
             ("clock_period", period),
             ("clock_high_s", high),
@@ -280,10 +315,10 @@ class Receiver:
         else:
             stuck = quiet & (failing | flagged)
         early = np.zeros(len(frames), np.bool_)
-        if interface in TIMED_OUT and rhythm.pause is not None:
-            early = (frames.pause >= 0) & (frames.pause < EARLY * rhythm.pause) & (at_start == 0)
-            if habit.timeout is not None:
-                early |= (frames.pause >= 0) & (frames.pause + self._grace(reading) < habit.timeout)
+        if interface in TIMED_OUT and rhythm.pause is not None and habit.timeout is not None:
+            early = (frames.pause < EARLY * rhythm.pause) & (at_start == 0)
+            early |= frames.pause + self._grace(reading) < habit.timeout
+            early &= frames.pause >= 0
         short, long = self._wrong_length(reading, habit)
         least = LEAST_SETUP * rhythm.period if self._least_setup is None else self._least_setup
         near = samples.closer_than(least)
@@ -305,7 +340,7 @@ class Receiver:
         ):
             frames = frames.with_kind(np.asarray(rows, np.bool_), name)
         believed = frames.is_any("", "setup_violation", "error_flag") & complete & ~failing
-        return replace(frames, usable=believed)
+        return replace(frames, usable=believed, warned=frames.warned & believed)
 
     def _grace(self, reading: Reading) -> int:
         """Between a burst's last edge and the edge its time-out counts from (ssi: the falling edge before)."""
@@ -335,8 +370,12 @@ class Receiver:
         stops = np.concatenate([bursts.opens[1:], [self._until]]).astype(np.int64)
         if edges.size < self._clock.times.size or edges.size == PILOT_EDGES:
             bursts, stops = bursts.take(slice(0, -1)), stops[:-1]
-        usual = _most_common(bursts.count // 2 if self.serial.interface != "spi" else (bursts.count + 1) // 2)
         bits = self.serial.sent_bits
+        if self.serial.interface == "ssi":
+            for word in (2 * (bits + 1), 2 * bits):
+                bursts = bursts.parted(word, WORD_REST * rhythm.period)
+            stops = np.concatenate([bursts.opens[1:], stops[-1:]])
+        usual = _most_common(bursts.count // 2 if self.serial.interface != "spi" else (bursts.count + 1) // 2)
         read = READERS[self.serial.interface]
         if self.serial.interface == "spi":
             return Habit(clocks=bits)

@@ -1,6 +1,6 @@
 """How long things took: clock phases, data delay, setup and hold at every sample, the time-out.
 
-All results are whole ticks; -1 stands where there is nothing to measure.
+All results are whole ticks. Where there is nothing to measure a duration is -1 and an instant NO_TICK.
 """
 
 from __future__ import annotations
@@ -11,7 +11,7 @@ import numpy as np
 
 from decode.serial.clock import Bursts, Rhythm
 from decode.serial.interfaces import Reading
-from decode.spans import BoolArray, Edges, IntArray
+from decode.spans import NO_TICK, BoolArray, Edges, IntArray
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -43,17 +43,17 @@ class Samples:
 def sample_timing(reading: Reading, data: Edges, late: float) -> Samples:
     """Setup, hold and delay at every sample of a reading; `late` ticks are added to the delay (biss-c line delay)."""
     sample = reading.sample
-    there = sample >= 0
+    there = sample != NO_TICK
     earlier = np.concatenate([reading.bursts.opens[:, None], sample[:, :-1]], axis=1)
-    later = np.concatenate([sample[:, 1:], np.full((sample.shape[0], 1), -1, np.int64)], axis=1)
+    later = np.concatenate([sample[:, 1:], np.full((sample.shape[0], 1), NO_TICK, np.int64)], axis=1)
     after = np.searchsorted(data.times, sample.ravel(), side="right").reshape(sample.shape)
     padded = np.concatenate([[np.iinfo(np.int64).min // 2], data.times, [np.iinfo(np.int64).max // 2]])
     last, following = padded[after], padded[after + 1]
     changed = there & (last > earlier)
-    edge = np.where(changed, last, np.int64(-1))
+    edge = np.where(changed, last, np.int64(NO_TICK))
     setup = np.where(changed, sample - last, np.int64(-1))
-    hold = np.where(there & (later >= 0) & (following < later), following - sample, np.int64(-1))
-    driven = changed & (reading.drive >= 0)
+    hold = np.where(there & (later != NO_TICK) & (following < later), following - sample, np.int64(-1))
+    driven = changed & (reading.drive != NO_TICK)
     delay = np.where(driven, last - reading.drive + round(late), np.int64(-1))
     return Samples(edge, setup, hold, delay)
 
