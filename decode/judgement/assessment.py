@@ -134,6 +134,10 @@ def upper_bound_95(faulty: int, n: int) -> float | None:
 
 
 def _at_most(k: int, mean: float) -> float:
-    """Probability of k or fewer events of a Poisson process with this mean."""
-    logs = -mean + np.arange(k + 1) * math.log(mean) - np.array([math.lgamma(i + 1) for i in range(k + 1)])
-    return float(np.exp(logs).sum())
+    """Probability of k or fewer events of a Poisson process with this mean, which is k or more.
+
+    Each term is i / mean of the one above it, so those further down than 40 roots of k add nothing.
+    """
+    exactly = math.exp(k * math.log(mean) - mean - math.lgamma(k + 1))
+    fewer = np.cumprod(np.arange(k, max(0, k - 40 * math.isqrt(k) - 40), -1) / mean)
+    return exactly * (1.0 + float(fewer.sum()))

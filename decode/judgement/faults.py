@@ -13,6 +13,7 @@ from decode.judgement.folding import (
     OF_SERIAL,
     OF_SERIAL_TIMING,
     Docket,
+    any_within,
     from_on,
     near,
     of_line,
@@ -236,10 +237,10 @@ def _fold_illegal(evidence: Evidence, found: Docket, illegal: IntArray) -> None:
     found.withdraw(("offset_step",), near(illegal, 8 * frame + cycle))
     found.withdraw(("edge_too_close", "glitch"), near(illegal, cycle))
 
-    def miscounted(one: Anomalies) -> np.ndarray[tuple[int, ...], np.dtype[np.bool_]]:
-        start, stop = (np.asarray(one.evidence[name], np.int64) for name in ("start_ticks", "stop_ticks"))
-        inside = (illegal[None, :] >= start[:, None]) & (illegal[None, :] <= stop[:, None])
-        return np.asarray(inside.any(axis=1), np.bool_)
+    def miscounted(one: Anomalies) -> BoolArray:
+        return any_within(
+            illegal, *(np.asarray(one.evidence[name], np.int64) for name in ("start_ticks", "stop_ticks"))
+        )
 
     found.withdraw(("turn_count_wrong",), miscounted)
 

@@ -135,14 +135,15 @@ def of_line(line: str | None) -> Which:
 
 def near(ticks: IntArray, distance: int) -> Which:
     """Occurrences not further than `distance` ticks from one of `ticks`."""
+    return lambda one: any_within(ticks, one.times - distance, one.times + distance)
 
-    def which(one: Anomalies) -> BoolArray:
-        if ticks.size == 0:
-            return np.zeros(len(one), np.bool_)
-        apart = np.abs(one.times[:, None] - ticks[None, :])
-        return np.asarray((apart <= distance).any(axis=1), np.bool_)
 
-    return which
+def any_within(ticks: IntArray, start: IntArray, stop: IntArray) -> BoolArray:
+    """(n,) whether one of `ticks` lies from start[i] to stop[i], both included."""
+    rising = np.sort(ticks)
+    return np.asarray(
+        np.searchsorted(rising, stop, side="right") > np.searchsorted(rising, start, side="left"), np.bool_
+    )
 
 
 def ticks_of(found: Iterable[Anomalies]) -> IntArray:

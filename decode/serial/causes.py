@@ -17,7 +17,7 @@ from decode.serial.continuity import Cadence
 from decode.serial.crc import crc_of_bits, parameters_of
 from decode.serial.frames import FRAME_KINDS, Bits, Frames, slices, words
 from decode.serial.interfaces import Habit
-from decode.serial.words import hexadecimal, value_of_bits
+from decode.serial.words import describe_bits, hexadecimal, value_of_bits
 from decode.sheet import Serial
 from decode.spans import BoolArray, IntArray
 
@@ -71,6 +71,9 @@ def _of_kind(
     line = lines.get("clock" if of_clock else "data")
     some = frames.take(rows)
     evidence["raw"] = list(hexadecimal(some.raw, serial.sent_bits))
+    if kind.endswith("_mismatch"):
+        first = describe_bits(unpacked(some.raw[:1], serial.sent_bits)[0])
+        evidence["bits"] = [first, *[None] * (rows.size - 1)]  # to read along with; one says how all look
     causes: Sequence[str | None] | None = None
     if kind in ("frame_short", "frame_long") and habit is not None:
         evidence |= {"clocks": some.clocks, "usual_clocks": np.full(rows.size, habit.clocks)}

@@ -10,7 +10,6 @@ from __future__ import annotations
 from dataclasses import dataclass, replace
 
 import numpy as np
-import numpy.typing as npt
 
 from decode.serial.frames import CODE, Frames
 from decode.sheet import Serial
@@ -120,7 +119,7 @@ def life_breaks(frames: Frames, serial: Serial, missing_after: IntArray) -> Bool
         least = later - earlier
         most = least + before[later] - before[earlier]
         fits = np.zeros(later.size, np.bool_)
-        for modulus in (1 << bits, (1 << bits) - 1):
+        for modulus in (1 << bits, max(2, (1 << bits) - 1)):
             moved = (life[later] - life[earlier]) % modulus
             fits |= (moved == least % modulus) | (moved == most % modulus)
         return np.asarray(fits | (frames.segment[later] != frames.segment[earlier]), np.bool_)
@@ -151,34 +150,33 @@ def stale_frames(frames: Frames, modulus: int, moved: FloatArray | None, count_s
     if rows.size < 3:
         return stale
     steps = wrapped_steps(frames.position[rows], modulus)
-    still = (steps == 0) & (np.diff(frames.segment[rows]) == 0)
+    joined = np.diff(frames.segment[rows]) == 0
+    still = (steps == 0) & joined
     first = np.flatnonzero(still & ~np.concatenate([[False], still[:-1]]))
     last = np.flatnonzero(still & ~np.concatenate([still[1:], [False]])) + 1
-    for begin, end in zip(first, last, strict=True):
-        if _stood_wrongly(rows, steps, moved, 1.5 + count_step, int(begin), int(end)):
+    spacing = np.where(joined, np.diff(frames.latch[rows]), 0)
+    for begin, end in zip(first.tolist(), last.tolist(), strict=True):
+        travel = np.zeros(1) if moved is None else np.abs(moved[rows[begin : end + 1]] - moved[rows[begin]])
+        if bool((travel > 1.5 + count_step).any()) or _caught_up(steps, spacing, begin, end):
             stale[rows[begin + 1 : end + 1]] = True
     return stale
 
 
-def _stood_wrongly(
-    rows: npt.NDArray[np.intp], steps: IntArray, moved: FloatArray | None, least: float, begin: int, end: int
-) -> bool:
-    """Whether the run of equal positions rows[begin..end] hides a movement of the shaft."""
-    if moved is not None:
-        travel = np.abs(moved[rows[begin : end + 1]] - moved[rows[begin]])
-        known = travel[~np.isnan(travel)]
-        if known.size and known.max() > least:
-            return True
-    around = np.concatenate([steps[max(begin - 8, 0) : begin], steps[end + 1 : end + 9]])
-    if around.size < 4 or end >= steps.size:
+def _caught_up(steps: IntArray, spacing: IntArray, begin: int, end: int) -> bool:
+    """Whether the steps around the run of still ones [begin, end) are those of a shaft that never stopped.
+
+    steps: (n,) movements from frame to frame. spacing: (n,) ticks that each took, 0 over a break.
+    """
+    around = np.r_[max(begin - 8, 0) : begin, end + 1 : min(end + 9, steps.size)]
+    around = around[spacing[around] > 0]
+    if around.size < 4 or end >= steps.size or spacing[end] == 0:
         return False
-    usual = float(np.median(around))
-    caught_up = float(steps[end])
-    expected = usual * (end - begin + 1)
+    speed = float(np.median(steps[around] / spacing[around]))
+    fitting = np.abs(steps[around] - speed * spacing[around]) <= np.maximum(2.0, 0.5 * abs(speed) * spacing[around])
+    hidden = speed * int(spacing[begin:end].sum())
+    expected = hidden + speed * int(spacing[end])
     return bool(
-        abs(usual) >= 3
-        and np.all(np.abs(around - usual) <= max(2.0, 0.5 * abs(usual)))
-        and abs(caught_up - expected) <= 0.5 * abs(expected)
+        abs(hidden) >= 3 * (end - begin) and fitting.all() and abs(int(steps[end]) - expected) <= 0.5 * abs(expected)
     )
 
 
@@ -186,7 +184,9 @@ def jumps_alone(frames: Frames, modulus: int) -> BoolArray:
     """(n,) frames whose position does not lie between its neighbours', by the serial line alone.
 
     A frame's deviation is its distance from the straight line through the frames around it; it is a jump where that
-    is far above the deviations of the frames nearby, which acceleration moves alike.
+    is far above the deviations of the frames nearby, which acceleration moves alike. A frame off the course also bends
+    the course the other way beside it, which a jerk of the shaft does not. Over a break, or where the shaft may have
+    gone half way round between two frames, nothing is told.
     """
     jumped = np.zeros(len(frames), np.bool_)
     rows = np.flatnonzero(frames.usable)
@@ -195,14 +195,22 @@ def jumps_alone(frames: Frames, modulus: int) -> BoolArray:
     steps = wrapped_steps(frames.position[rows], modulus).astype(np.float64)
     spacing = np.diff(frames.latch[rows]).astype(np.float64)
     speed = steps / spacing
-    bend = np.abs(np.diff(speed)) * np.minimum(spacing[:-1], spacing[1:]) / 2
-    padded = np.pad(bend, NEIGHBOURS // 2, mode="reflect")
-    usual = np.median(np.lib.stride_tricks.sliding_window_view(padded, NEIGHBOURS), axis=1)
-    far = bend > 4.0 + 8.0 * usual
+    known = (np.diff(frames.segment[rows]) == 0) & (_around(np.abs(speed)) * spacing < modulus / 3)
+    turned = np.where(known[1:] & known[:-1], np.diff(speed) * np.minimum(spacing[:-1], spacing[1:]) / 2, 0.0)
+    bend = np.abs(turned)
+    far = bend > 4.0 + 8.0 * _around(bend)
+    before, after = (np.pad(turned, side)[cut] for side, cut in (((1, 0), slice(-1)), ((0, 1), slice(1, None))))
+    back = np.maximum(-before * np.sign(turned), -after * np.sign(turned)) > bend / 4
     # a single wild frame bends the course three times, most at itself
-    peak = far & (bend >= np.concatenate([[0.0], bend[:-1]])) & (bend > np.concatenate([bend[1:], [0.0]]))
+    peak = far & back & (bend >= np.abs(before)) & (bend > np.abs(after))
     jumped[rows[1:-1][peak]] = True
     return jumped
+
+
+def _around(values: FloatArray) -> FloatArray:
+    """(n,) the median of each value and those beside it, NEIGHBOURS in all."""
+    padded = np.pad(values, NEIGHBOURS // 2, mode="reflect")
+    return np.asarray(np.median(np.lib.stride_tricks.sliding_window_view(padded, NEIGHBOURS), axis=1), np.float64)
 
 
 def stood_still(

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import numpy as np
 import pytest
 from hypothesis import given
@@ -264,3 +266,34 @@ def test_glitches_of_both_pieces_are_counted_together() -> None:
 @pytest.mark.parametrize(("edges", "pause", "grows"), [(10, 50.0, True), (10, 40.0, False), (4, 50.0, False)])
 def test_whether_the_last_burst_but_one_may_still_grow(edges: int, pause: float, grows: bool) -> None:
     assert found(clock_of(4, 2, pause=40)).last_may_grow(edges, pause) is grows
+
+
+# ---- words run together -------------------------------------------------------------------------------------------
+
+
+def words_at(pause: int) -> Bursts:
+    """Three words of four edges with `pause` ticks of rest between them, too short to part them as bursts."""
+    return found(clock_of(4, 4, 4, pause=pause), rhythm=Rhythm(1, 10.0, 5.0, 5.0, 1000.0, None))
+
+
+@pytest.mark.parametrize(("pause", "words"), [(15, 1), (16, 3)])
+def test_words_that_rest_between_them_are_taken_apart(pause: int, words: int) -> None:
+    """
+    clock  ‾‾_‾_‾‾‾_‾_‾‾‾_‾_‾‾    more than 15 ticks of rest after every fourth edge
+    """
+    bursts = words_at(pause).parted(4, 15.0)
+    assert bursts.count.tolist() == ([12] if words == 1 else [4, 4, 4])
+    assert bursts.opens.tolist() == bursts.first_edge.tolist()
+
+
+@pytest.mark.parametrize("edges", [5, 6, 12, 24])
+def test_a_burst_that_is_not_whole_words_stays(edges: int) -> None:
+    assert words_at(100).parted(edges, 15.0).count.tolist() == [12]
+
+
+def test_the_longest_phase_of_each_burst() -> None:
+    """Pauses between bursts are none of theirs, nor is what follows edges that were found to be no clock."""
+    bursts = found(Edges.from_toggles(1, [0, 5, 10, 18, 500, 507, 510, 515, 900]))
+    assert bursts.longest().tolist() == [8, 7, 0]
+    shorter = replace(bursts, count=bursts.count - np.array([2, 0, 0]))
+    assert shorter.longest().tolist() == [5, 7, 0]
