@@ -19,6 +19,7 @@ from typing import Any, Literal
 import msgspec
 
 from decode.errors import InputError, maybe_nearest
+from decode.rules.measurements import MEASUREMENTS
 
 Interface = Literal["ssi", "biss-c", "spi"]
 
@@ -538,8 +539,6 @@ def index_levels(states: str) -> tuple[int | None, int | None] | None:
 
 
 def _impossible_limits(sheet: Sheet) -> Iterator[tuple[str, str, str]]:
-    from decode.judgement.measurements import MEASUREMENTS
-
     for name, (low, high) in sheet.limits.items():
         if name not in MEASUREMENTS:
             nearest = maybe_nearest(name, MEASUREMENTS)

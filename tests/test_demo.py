@@ -11,7 +11,7 @@ from typing import Any
 import pytest
 
 from decode.cli import main
-from decode.judgement.measurements import MEASUREMENTS
+from decode.rules.measurements import MEASUREMENTS
 
 ROOT = Path(__file__).parents[1]
 CAPTURES = ROOT / "captures"

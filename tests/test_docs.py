@@ -28,8 +28,8 @@ from pathlib import Path
 import pytest
 
 from decode.cli import main
-from decode.judgement.measurements import MEASUREMENTS
 from decode.report.document import SCHEMA_FILE
+from decode.rules.measurements import MEASUREMENTS
 
 ROOT = Path(__file__).parents[1]
 DOCS = ROOT / "docs"

@@ -6,16 +6,16 @@ from pathlib import Path
 
 import pytest
 
-from decode.judgement.kinds import KINDS
-from decode.judgement.measurements import MEASUREMENTS
-from decode.judgement.pages import PAGES, write
+from decode.rules.kinds import KINDS
+from decode.rules.measurements import MEASUREMENTS
+from decode.rules.pages import PAGES, write
 
 DOCS = Path(__file__).parent.parent / "docs"
 
 
 @pytest.mark.parametrize("name", PAGES)
 def test_the_file_is_the_generated_page(name: str) -> None:
-    """Where this fails: python -m decode.judgement.pages docs"""
+    """Where this fails: python -m decode.rules.pages docs"""
     assert (DOCS / name).read_text(encoding="utf-8") == PAGES[name]()
 
 

@@ -18,7 +18,7 @@ from decode.bench.quadrature import Quadrature
 from decode.bench.scenario import Fault
 from decode.bench.stages import Angles, Flip, Recording, Segment, Settings, Wiring, Words
 from decode.errors import InputError
-from decode.judgement.kinds import KINDS
+from decode.rules.kinds import KINDS
 from decode.sheet import Interface, Sheet
 
 DEGREES = 360.0

@@ -10,7 +10,7 @@ from decode.bench.motion import Constant, Motion
 class Fault(msgspec.Struct, frozen=True):
     """One fault. `decode.bench.faults.FAULTS` says what each kind does and which of the parameters it takes.
 
-    kind: a name of `decode.judgement.kinds`. time_s: when, on the capture's own time axis: the first frame, edge or
+    kind: a name of `decode.rules.kinds`. time_s: when, on the capture's own time axis: the first frame, edge or
     index from then on has it. None: from the start, or, for what concerns the whole capture, throughout.
     role: the line. frames: how many in a row. clocks: how many too few or too many. bits: which of the word, from 0
     for the first one sent. counts: A/B counts. level: 0 or 1. width_s, duration_s, margin_s, delay_s: times.

@@ -11,8 +11,8 @@ import math
 import msgspec
 import numpy as np
 
-from decode.judgement.measurements import MEASUREMENTS
 from decode.judgement.records import Limit, Measurement, Verdict
+from decode.rules.measurements import MEASUREMENTS
 from decode.spans import FloatArray, IntArray
 
 

@@ -8,8 +8,8 @@ from typing import Any
 import numpy as np
 
 from decode.anomalies import Anomalies
-from decode.judgement.kinds import KINDS
 from decode.judgement.records import Finding
+from decode.rules.kinds import KINDS
 
 
 def findings_of(anomalies: Iterable[Anomalies], tick_s: float) -> list[Finding]:

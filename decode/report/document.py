@@ -15,9 +15,9 @@ from typing import Any, get_args
 import msgspec
 import numpy as np
 
-from decode.judgement.kinds import KINDS
-from decode.judgement.measurements import MEASUREMENTS
 from decode.judgement.records import SCHEMA, Report
+from decode.rules.kinds import KINDS
+from decode.rules.measurements import MEASUREMENTS
 from decode.sheet import COMPLEMENTS, ROLES, Interface
 
 SCHEMA_FILE = Path(__file__).with_name("report.schema.json")

@@ -12,7 +12,6 @@ from fractions import Fraction
 from typing import NamedTuple
 
 from decode.anomalies import Severity
-from decode.judgement.kinds import KINDS
 from decode.judgement.records import AgreementRecord, Finding, Measurement, Report
 from decode.report.quantities import (
     bounds,
@@ -26,6 +25,7 @@ from decode.report.quantities import (
     unit_of,
     with_uncertainty,
 )
+from decode.rules.kinds import KINDS
 
 ENOUGH_PER_CLOCK, GOOD_PER_CLOCK = 4, 10
 ENOUGH_PER_STATE, GOOD_PER_STATE = 4, 20

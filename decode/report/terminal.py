@@ -13,7 +13,6 @@ from typing import NamedTuple
 from rich.console import Console
 from rich.text import Text
 
-from decode.judgement.kinds import KINDS
 from decode.judgement.records import Measurement, Report
 from decode.report.quantities import (
     ELECTRICAL,
@@ -28,6 +27,7 @@ from decode.report.quantities import (
 )
 from decode.report.summary import Answer, Group, groups, margin, summary
 from decode.report.text import aligned, in_ascii, visible, wrapped
+from decode.rules.kinds import KINDS
 
 SCREENFUL = 24
 """Lines of the smallest usual terminal, 80 columns wide: the summary is written to fit them."""

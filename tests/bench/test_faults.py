@@ -15,7 +15,7 @@ from decode.bench import motion
 from decode.bench.board import Fault, Scenario, Simulation, simulate
 from decode.bench.faults import FAULTS, SETTINGS
 from decode.bench.truth import FaultTruth
-from decode.judgement.kinds import KINDS
+from decode.rules.kinds import KINDS
 from decode.sheet import Field, Incremental, Serial, Sheet
 from decode.spans import Edges, IntArray
 

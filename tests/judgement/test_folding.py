@@ -30,8 +30,8 @@ from decode.judgement.folding import (
     ticks_of,
     within,
 )
-from decode.judgement.kinds import KINDS
 from decode.lines.activity import LineActivity
+from decode.rules.kinds import KINDS
 from decode.serial.continuity import Cadence
 from decode.serial.frames import Frames
 from decode.sheet import Field, Incremental, Serial, Sheet

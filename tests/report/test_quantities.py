@@ -8,7 +8,6 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
-from decode.judgement.measurements import MEASUREMENTS
 from decode.report.quantities import (
     ELECTRICAL,
     NOT_KNOWN,
@@ -23,6 +22,7 @@ from decode.report.quantities import (
     trimmed,
     with_uncertainty,
 )
+from decode.rules.measurements import MEASUREMENTS
 
 
 @pytest.mark.parametrize(

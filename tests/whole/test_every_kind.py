@@ -16,7 +16,7 @@ from boards import BISS, BISS_LIFE, SPI, SSI, SSI_CHECKED, checked
 
 from decode.bench import motion
 from decode.bench.scenario import Fault, Scenario
-from decode.judgement.kinds import KINDS
+from decode.rules.kinds import KINDS
 from decode.sheet import Sheet
 
 AT = (0.071, 0.161)

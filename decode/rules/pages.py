@@ -1,7 +1,7 @@
 """docs/findings.md and docs/measurements.md, written from the tables that the code itself reads.
 
 A page written by hand falls behind the table beside it. These two are made from `kinds` and `measurements`, and a test
-holds the files in docs/ against what is made here; after a change to a table, `python -m decode.judgement.pages docs`
+holds the files in docs/ against what is made here; after a change to a table, `python -m decode.rules.pages docs`
 writes them anew.
 """
 
@@ -10,8 +10,8 @@ from __future__ import annotations
 import sys
 from pathlib import Path
 
-from decode.judgement.kinds import KINDS, Kind
-from decode.judgement.measurements import MEASUREMENTS, Definition
+from decode.rules.kinds import KINDS, Kind
+from decode.rules.measurements import MEASUREMENTS, Definition
 
 _ROOMS = {
     "capture": ("The capture itself", "What stands in the way of trusting the rest."),
