@@ -8,11 +8,12 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from dataclasses import dataclass, field
+from functools import cached_property
 from importlib.metadata import PackageNotFoundError, version
 from pathlib import Path
+from typing import TYPE_CHECKING
 
 import numpy as np
-import pandas as pd
 
 from decode.agreement.fit import Agreement, agree
 from decode.agreement.latch import Joined, LatchJoin
@@ -28,23 +29,39 @@ from decode.judgement.judge import judge
 from decode.judgement.records import Report
 from decode.lines.activity import Activity, LineActivity
 from decode.lines.pairs import PairCombiner, default_skew
-from decode.report.columns import angles_table, frames_table
 from decode.serial.continuity import absorbed, cadence, jumped_alone, stood_still, with_breaks
 from decode.serial.frames import Frames
 from decode.serial.receiver import Receiver
 from decode.sheet import COMPLEMENTS, Sheet, load
 from decode.spans import FloatArray, IntArray, Span
 
+if TYPE_CHECKING:
+    import pandas as pd
+
 Progress = Callable[[float, str], None]
 
 
-@dataclass(frozen=True, slots=True, eq=False)
 class Checked:
-    """A report, and the tables behind it (see `decode.report.columns`)."""
+    """A report, and the tables behind it (see `decode.report.columns`), which are made when first asked for."""
 
-    report: Report
-    frames: pd.DataFrame
-    angles: pd.DataFrame
+    def __init__(self, report: Report, evidence: Evidence, edges: tuple[IntArray, IntArray] | None) -> None:
+        self.report = report
+        self._evidence = evidence
+        self._edges = edges
+
+    @cached_property
+    def frames(self) -> pd.DataFrame:
+        """One row a frame."""
+        from decode.report.columns import frames_table
+
+        return frames_table(self._evidence)
+
+    @cached_property
+    def angles(self) -> pd.DataFrame:
+        """One row a frame, or an edge where there is no serial line."""
+        from decode.report.columns import angles_table
+
+        return angles_table(self._evidence, self._edges)
 
 
 def check(
@@ -69,8 +86,7 @@ def check_capture(capture: Capture, board: Sheet, *, progress: Progress | None =
     if progress is not None:
         progress(1.0, "judging")
     evidence = bench.evidence()
-    report = judge(evidence, version=_version(), command=command)
-    return Checked(report, frames_table(evidence), angles_table(evidence, bench.edges()))
+    return Checked(judge(evidence, version=_version(), command=command), evidence, bench.edges())
 
 
 def _version() -> str:
