@@ -21,7 +21,7 @@ Severity = Literal["fault", "warning", "note"]
 class Anomalies:
     """Occurrences of one kind of finding.
 
-    kind: a name of `decode.judgement.kinds`.
+    kind: a name of `decode.rules.kinds`.
     times: (n,) ticks.
     frames: (n,) index of the frame concerned, from 0, or None where no frame is.
     line: the line's column name, or None.

@@ -266,7 +266,7 @@ class _Bench:
         if joined is not None and turn is not None:
             moved = np.asarray(joined.counted * positions_per_turn(sheet) / turn, np.float64)
         frames = stood_still(frames, sheet, modulus(sheet), moved, _count_step(sheet.position_bits, turn))
-        agreement = self._compared(frames, joined, turn) if sheet.position_bits else None
+        agreement = self._compared(frames, joined, turn, _illegal(incremental)) if sheet.position_bits else None
         frames = _with_outliers(frames, agreement) if agreement is not None else jumped_alone(frames, modulus(sheet))
         frames = absorbed(with_breaks(frames, sheet, rhythm))
         facts = SerialFacts(
@@ -284,7 +284,7 @@ class _Bench:
         stated = self._sheet.incremental.counts_per_turn if self._sheet.incremental is not None else None
         return stated if stated is not None or incremental is None else incremental.counts_per_turn
 
-    def _compared(self, frames: Frames, joined: Joined | None, turn: int | None) -> Agreement | None:
+    def _compared(self, frames: Frames, joined: Joined | None, turn: int | None, illegal: IntArray) -> Agreement | None:
         if joined is None or self._sheet.serial is None:
             return None
         return agree(
@@ -301,7 +301,14 @@ class _Bench:
             tick_s=float(self._capture.tick),
             grid_ticks=max(1, self._capture.grid),
             stretch=frames.segment,
+            breaks=illegal,
         )
+
+
+def _illegal(incremental: IncrementalResult | None) -> IntArray:
+    """Ticks at which A and B changed together, so that counts were lost there."""
+    found = [] if incremental is None else incremental.anomalies
+    return np.concatenate([np.empty(0, np.int64), *(one.times for one in found if one.kind == "illegal_transition")])
 
 
 def _count_step(position_bits: int, turn: int | None) -> float:

@@ -4,13 +4,15 @@ At the latch of each frame the count C is known, the speed v, and the serial pos
 
     C = direction * counts_per_turn * p + offset + latency * v + what is left
 
-since a serial position that is `latency` old shows where the shaft was then. The offset has its own value between any
+since a serial position that is `latency` old shows where the shaft was then (and latency^2 / 2 times the acceleration
+less, where that is worth telling). The offset has its own value between any
 two steps (counts lost or invented, a position that slipped). The serial position is a whole number for an interval,
 so half a unit is added to it.
 
 Everything is estimated together by least squares over the frames that fit; frames that do not are left out entirely,
 so a wild frame has no say at all. Fit and search for steps take turns until neither changes. The lowest four
-harmonics of the turn are fitted along where two turns are there, so that an eccentric disc does not pass for latency.
+harmonics of the turn are fitted along, so that an eccentric disc passes neither for latency nor for a step; where the
+shaft did not go round twice they are held to what encoders have, and the uncertainties tell what they leave open.
 
 What the motion cannot tell apart is not told. Scale and offset need travel. Latency and offset need a changing speed:
 the latency is given where
@@ -19,7 +21,9 @@ the latency is given where
   speed between neighbouring frames (a speed that is mostly noise would draw the slope towards zero), and
 - its standard uncertainty times the speed is no more than one unit of the coarser of both readings.
 
-Otherwise the offset holds latency times speed as well. Source of both bounds: common practice, no source.
+Otherwise the offset holds latency times speed as well. A step may look like latency at a change of speed; where one
+could hide there, or where something that is no plain step looks like one, the latency's uncertainty holds what that
+would do. Source of both bounds: common practice, no source.
 """
 
 from __future__ import annotations
@@ -29,7 +33,7 @@ from dataclasses import dataclass, field
 import numpy as np
 import numpy.typing as npt
 
-from decode.agreement import regression, steps, unwrap
+from decode.agreement import joint, regression, steps, unwrap
 from decode.agreement.angle import AngleError, maybe_split
 from decode.agreement.steps import Steps
 from decode.spans import BoolArray, FloatArray, IntArray
@@ -40,19 +44,26 @@ TURNS_FOR_HARMONICS = 2.0
 TURNS_FOR_SCALE = 0.25
 TOLERANCE = 6.0
 """Robust standard deviations within which a frame belongs to the fit."""
-OWN_ERROR_TURNS = 0.5 / 360
+OWN_ERROR_TURNS = 1.0 / 360
 """What an encoder's own error may bend the scale by, over a travel too short to tell it from scale: half a degree,
 more than data sheets of mounted encoders allow. Common practice, no source."""
+USUAL_LATENCY_S = 100e-6
+"""What latency may bend the scale by where the two cannot be told apart. Common practice, no source."""
 SPEED_CONTRAST = 5.0
 LOST = 0.1
 """Turns: median miss from frame to frame beyond which nothing follows anything; words at random give a quarter."""
 SIGNIFICANT = 4.0
 """Standard uncertainties by which a scale differs from the sheet's for good."""
-MOST_ROUNDS = 8
+LEAST_BEND = 0.01
+"""Units by which what latency and acceleration do may still change from round to round."""
+ABRUPT = 16
+MOST_FRAMES_LATE = 4
+MOST_ROUNDS = 12
 LEAST_SHARE = 1e-3
 
 UNRELATED = "serial position and count do not follow each other"
 NOT_SEPARABLE = "not separable: the speed varied too little"
+EXCHANGEABLE = "not separable: other causes, a step at a change of speed among them, would look the same"
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -111,15 +122,15 @@ class Agreement:
 
 def _no_steps() -> Steps:
     whole = np.empty(0, np.int64)
-    return Steps(whole, whole, whole, np.empty(0, np.float64), np.empty(0, np.float64))
+    return Steps(whole, whole, whole, np.empty(0, np.float64), np.empty(0, np.float64), np.empty(0, np.bool_))
 
 
 @dataclass(frozen=True, slots=True, eq=False)
 class _Frames:
     """The frames compared. turns: (n,) serial, unwrapped, at the middle of the unit. in_turn: (n,) the same within
     the turn. slope: serial positions per count, signed. held: (n,) one of both readings stood still while the other
-    moved. borders: (b,) rows at which an unbroken stretch begins. unit, serial_unit: counts. grid:
-    ticks."""
+    moved. borders: (b,) rows at which an unbroken stretch begins. breaks: (k,) rows at which the count is known not
+    to go on. unit, serial_unit: counts. grid: ticks."""
 
     index: IntArray
     time: IntArray
@@ -132,6 +143,7 @@ class _Frames:
     stale: BoolArray
     held: BoolArray
     borders: IntArray
+    breaks: IntArray
     unit: float
     serial_unit: float
     positions_per_turn: int
@@ -167,7 +179,9 @@ class _Board:
 
 @dataclass(frozen=True, slots=True, eq=False)
 class _Settled:
-    """A fit together with the steps and the frames it goes with."""
+    """A fit together with the steps and the frames it goes with. passing: (n,) frames between two levels, part of a
+    step. speed: (n,) without what steps make of it. bend: (n,) counts that the speed's change makes of the latency.
+    hidden: ticks by which steps that would not be found may shift the latency."""
 
     fitted: regression.Fitted
     counts_per_turn: float
@@ -175,7 +189,11 @@ class _Settled:
     with_speed: bool
     starts: IntArray
     inlier: BoolArray
+    passing: BoolArray
     noise: float
+    speed: FloatArray
+    bend: FloatArray
+    hidden: float
 
     def column(self, name: str) -> int:
         return {"scale": 0, "speed": int(self.with_scale)}[name]
@@ -196,6 +214,7 @@ def agree(
     tick_s: float,
     grid_ticks: int = 1,
     stretch: IntArray | None = None,
+    breaks: IntArray | None = None,
 ) -> Agreement:
     """Compare frames with the count at their latches.
 
@@ -203,7 +222,8 @@ def agree(
     usable: (n,) frames without a serial fault. counted, speed, uncertainty: (n,) as `LatchJoin` gives them (counts,
     counts per tick, counts). modulus: positions per turn times turns. counts_per_turn, direction: the sheet's.
     grid_ticks: the capture's sampling interval. stretch: (n,) number of the unbroken stretch of the capture that a
-    frame is in, rising; the offset may differ from one to the next without being a step.
+    frame is in, rising; the offset may differ from one to the next without being a step. breaks: (k,) ticks at which
+    counts were surely lost or invented; the offset may differ from there, which is told as a step.
     """
     row = np.flatnonzero(usable & np.isfinite(counted) & np.isfinite(speed))
     if row.size < FEWEST_FRAMES:
@@ -231,12 +251,21 @@ def agree(
         stale,
         held,
         np.empty(0, np.int64) if stretch is None else np.flatnonzero(np.diff(stretch[row])) + 1,
+        _rows_after(time[row], breaks),
         max(1.0, serial_unit),
         serial_unit,
         positions_per_turn,
         grid_ticks,
     )
     return _compared(frames, time.size, board)
+
+
+def _rows_after(time: IntArray, breaks: IntArray | None) -> IntArray:
+    """The first row after each break, where there are rows on both sides."""
+    if breaks is None:
+        return np.empty(0, np.int64)
+    rows = np.unique(np.searchsorted(time, breaks, side="right"))
+    return np.asarray(rows[(rows > 0) & (rows < time.size)], np.int64)
 
 
 def _nothing(frames: int, reason: str) -> Agreement:
@@ -286,11 +315,11 @@ def _compared(frames: _Frames, total: int, board: _Board) -> Agreement:
     sheet = board.counts_per_turn
     found = frames.counts_per_turn
     travel = float(np.ptp(frames.turns))
-    harmonics = HARMONICS if travel >= TURNS_FOR_HARMONICS else 0
-    free = _settle(frames, found, travel >= TURNS_FOR_SCALE, True, harmonics, None)
+    free = _settle(frames, found, travel >= TURNS_FOR_SCALE, True, None)
     if np.count_nonzero(free.inlier) * 2 < frames.index.size:
         return _nothing(frames.index.size, UNRELATED)
-    scale, doubt = _scale(free, frames, travel)
+    plain = free if _is_separable(free, frames) else _settle(frames, found, free.with_scale, False, free)
+    scale, doubt = _scale(plain, frames, travel, board.tick_s)
     if scale is None:
         reasons["counts_per_turn"] = reasons["scale_error"] = "the shaft went less than a quarter of a turn"
     elif sheet is None:
@@ -298,13 +327,13 @@ def _compared(frames: _Frames, total: int, board: _Board) -> Agreement:
     wrong = scale is not None and sheet is not None and abs(scale - sheet) > max(SIGNIFICANT * doubt, 0.5)
     by_sheet = sheet is not None and not wrong
     per_turn = float(sheet) if sheet is not None and by_sheet else scale or found
-    last = free
-    for with_speed in (True, False):
-        last = _settle(frames, per_turn, not by_sheet and scale is not None, with_speed, harmonics, free)
-        if not with_speed or _is_separable(last, frames):
-            break
-    if not last.with_speed:
-        reasons["latency_s"] = NOT_SEPARABLE
+    with_scale = not by_sheet and scale is not None
+    last = _settle(frames, per_turn, with_scale, True, free)
+    separable = _is_separable(last, frames)
+    if not separable and _speed_is_nothing(frames, board.tick_s):
+        last = _settle(frames, per_turn, with_scale, False, free)
+    if not separable:
+        reasons["latency_s"] = EXCHANGEABLE if last.with_speed else NOT_SEPARABLE
     return _told(frames, total, board, last, _Scale(scale, doubt, wrong), reasons)
 
 
@@ -313,48 +342,114 @@ def _settle(
     per_turn: float,
     with_scale: bool,
     with_speed: bool,
-    harmonics: int,
     begin: _Settled | None,
 ) -> _Settled:
     """Fit, look for steps, leave out what is off, until nothing changes."""
-    middle, fastest = _middle(frames), _fastest(frames)
+    fastest = _fastest(frames)
     with_speed = with_speed and fastest > 0
+    plain = frames.counted - frames.counted[0] - frames.sense * per_turn * (frames.turns - frames.turns[0])
+    floor = frames.serial_unit / np.sqrt(12)
+    starts = _borders(frames) if begin is None else begin.starts
+    inlier = _near_neighbours(frames, plain) if begin is None else begin.inlier
+    noise = floor if begin is None else begin.noise
+    passing, bend = np.zeros(plain.size, np.bool_), np.zeros(plain.size)
+    rest = plain if begin is None else begin.fitted.residual
+    share, cell = _own_share(frames), _cells(frames)
+    usual = OWN_ERROR_TURNS * per_turn / np.repeat(np.arange(1, HARMONICS + 1), 2) ** 2
+    for left in reversed(range(MOST_ROUNDS)):
+        weight = np.where(inlier, share * noise**2 / (noise**2 + frames.uncertainty**2 / 3), 0.0)
+        tied = np.concatenate([np.zeros(int(with_scale) + int(with_speed)), (noise / usual) ** 2])
+        design = _design(frames, with_scale, _undisturbed(frames, starts) / fastest if with_speed else None)
+        scatter = max(floor, joint.noise_of(rest, weight))
+        blocks = joint.blocks_of(plain + bend, design, weight, starts, tied, frames.time, scatter)
+        tried = np.union1d(starts, joint.steps_in(blocks, frames.unit)) if left else starts
+        speed = _undisturbed(frames, tried)
+        design = _design(frames, with_scale, speed / fastest if with_speed else None)
+        fitted = regression.fit(plain + bend, design, tied.size, weight, tried, cell, floor, tied)
+        if left == 0:
+            break
+        rest = along = fitted.residual + fitted.levels[fitted.segment]
+        fresh, kept, passing = _segments(frames, along, tried, floor)
+        bent = _bend(frames, speed, *_delay(fitted, int(with_scale), fastest)) if with_speed else None
+        settled = bent is None or bool(np.abs(bent - bend).max() < LEAST_BEND * frames.unit)
+        if settled and all(map(np.array_equal, (fresh, fresh, kept), (starts, tried, inlier))):
+            break
+        starts, inlier, noise = fresh, kept, _noise(frames, along - _levels(along, frames.held, fresh), floor)
+        bend = bend if bent is None or settled else bent
+    hidden = 0.0
+    if with_speed:
+        apart = np.union1d(starts, _abrupt(frames)).astype(np.int64)
+        blocks = joint.blocks_of(plain + bend, design, weight, apart, tied, frames.time, scatter)
+        hidden = joint.hidden_pull(blocks, starts, frames.unit, int(with_scale)) / fastest
+    return _Settled(fitted, per_turn, with_scale, with_speed, starts, inlier, passing, noise, speed, bend, hidden)
+
+
+def _design(frames: _Frames, with_scale: bool, speed: FloatArray | None) -> regression.Design:
+    """Columns of the fit: turns, speed, and the harmonics of the turn."""
+    middle, means = _middle(frames), _means_of_harmonics(frames)
 
     def design(low: int, high: int) -> FloatArray:
         columns = []
         if with_scale:
             columns.append(frames.turns[low:high] - middle)
-        if with_speed:
-            columns.append(frames.speed[low:high] / fastest)
-        if harmonics:
-            wave = np.exp(2j * np.pi * frames.in_turn[low:high])
-            power = wave
-            for _ in range(harmonics):
-                columns += [power.real, power.imag]
-                power = power * wave
-        return np.column_stack(columns) if columns else np.empty((high - low, 0))
+        if speed is not None:
+            columns.append(speed[low:high])
+        wave = np.exp(2j * np.pi * frames.in_turn[low:high])
+        power = wave
+        for mean in means:
+            columns += [power.real - mean.real, power.imag - mean.imag]
+            power = power * wave
+        return np.column_stack(columns)
 
-    target = frames.counted - frames.counted[0] - frames.sense * per_turn * (frames.turns - frames.turns[0])
-    floor = frames.serial_unit / np.sqrt(12)
-    columns = int(with_scale) + int(with_speed) + 2 * harmonics
-    borders = _borders(frames)
-    starts = borders if begin is None else begin.starts
-    inlier = _near_neighbours(frames, target) if begin is None else begin.inlier
-    noise = floor if begin is None else begin.noise
-    share, cell = _own_share(frames), _cells(frames)
-    for left in reversed(range(MOST_ROUNDS)):
-        weight = np.where(inlier, share * noise**2 / (noise**2 + frames.uncertainty**2 / 3), 0.0)
-        blocks = joint.blocks_of(target, design, columns, weight, starts, frames.time)
-        tried = np.union1d(starts, joint.steps_in(blocks, floor, frames.unit)) if left else starts
-        fitted = regression.fit(target, design, columns, weight, tried, cell, floor)
-        along = fitted.residual + fitted.levels[fitted.segment]
-        fresh, kept, passing = _segments(frames, along, tried, floor) if left else (starts, inlier, passing)
-        unchanged = np.array_equal(fresh, starts) and np.array_equal(kept, inlier)
-        off = along - _levels(along, frames.held, fresh)
-        starts, inlier, noise = fresh, kept, _noise(frames, off, floor)
-        if unchanged and np.array_equal(tried, starts):
-            break
-    return _Settled(fitted, per_turn, with_scale, with_speed, starts, inlier, noise)
+    return design
+
+
+def _means_of_harmonics(frames: _Frames) -> npt.NDArray[np.complex128]:
+    """(HARMONICS,) what to take off each, so that the level stays that of the frames: their mean where they cover only
+    part of the turn, nothing where they cover it twice."""
+    if np.ptp(frames.turns) >= TURNS_FOR_HARMONICS:
+        return np.zeros(HARMONICS, np.complex128)
+    wave = np.exp(2j * np.pi * frames.in_turn)
+    return np.asarray([np.mean(wave**order) for order in range(1, HARMONICS + 1)], np.complex128)
+
+
+def _abrupt(frames: _Frames) -> IntArray:
+    """Rows at which the speed changes most: there a step is the easiest to take for latency."""
+    change = np.abs(np.diff(frames.speed))
+    most = np.argpartition(-change, min(ABRUPT, change.size) - 1)[:ABRUPT]
+    rows = np.unique(most[:, np.newaxis] + np.arange(3))
+    return np.asarray(rows[rows < frames.speed.size], np.int64)
+
+
+def _undisturbed(frames: _Frames, starts: IntArray) -> FloatArray:
+    """(n,) the speed; beside a step it is taken over counts that are missing, so there that of the frames around."""
+    stepped = np.setdiff1d(starts[1:], frames.borders)
+    stepped = stepped[(stepped >= 2) & (stepped < frames.index.size - 1)]
+    speed = frames.speed.copy()
+    before, after = frames.speed[stepped - 2], frames.speed[stepped + 1]
+    speed[stepped - 1], speed[stepped] = (2 * before + after) / 3, (before + 2 * after) / 3
+    return speed
+
+
+def _delay(fitted: regression.Fitted, column: int, fastest: float) -> tuple[float, float]:
+    """The latency of a fit and its scatter, in ticks."""
+    return float(fitted.coefficients[column]) / fastest, float(np.sqrt(fitted.covariance[column, column])) / fastest
+
+
+def _bend(frames: _Frames, speed: FloatArray, latency: float, scatter: float) -> FloatArray | None:
+    """(n,) counts that the shaft would have gone further in `latency` ticks at the speed it has now, than it has at
+    the speed it had: half the acceleration times the square of the latency. None where that is not known, or nothing.
+    """
+    time = frames.time
+    spacing = float(time[-1] - time[0]) / (time.size - 1)
+    if abs(latency) < SIGNIFICANT * scatter or abs(latency) > MOST_FRAMES_LATE * spacing:
+        return None
+    sparse = speed[:: max(1, speed.size // 4096)]
+    changes = float(np.abs(np.diff(sparse)).max()) / (spacing * max(1, speed.size // 4096))
+    if latency * latency / 2 * changes < LEAST_BEND * frames.unit:
+        return None
+    between = np.maximum(np.gradient(time.astype(np.float64)), spacing / 16)
+    return np.asarray(latency * latency / 2 * np.gradient(speed) / between, np.float64)
 
 
 def _own_share(frames: _Frames) -> FloatArray:
@@ -384,9 +479,7 @@ def _segments(
     def among(rows: IntArray) -> IntArray:
         return np.searchsorted(sound, rows[rows > 0])
 
-    begun = steps.find(
-        along[sound], frames.counted[sound], frames.unit, frames.serial_unit, among(fixed), among(tried)
-    )
+    begun = steps.find(along[sound], frames.counted[sound], frames.unit, frames.serial_unit, among(fixed), among(tried))
     starts = np.union1d(fixed, sound[begun]).astype(np.int64)
     off = along - _levels(along, frames.held, starts)
     kept = _fitting(frames, off, floor)
@@ -396,7 +489,7 @@ def _segments(
         off = along - _levels(along, frames.held, starts)
         kept = _fitting(frames, off, floor)
     inner = np.setdiff1d(starts[1:], frames.borders)
-    return starts, kept, steps.passing(along, ~kept & ~frames.held, starts, inner)
+    return starts, kept, steps.passing(along, along - off, ~kept & ~frames.held, starts, inner)
 
 
 def _noise(frames: _Frames, off: FloatArray, floor: float) -> float:
@@ -439,15 +532,16 @@ def _near_neighbours(frames: _Frames, target: FloatArray) -> BoolArray:
     return np.asarray((off <= tolerance) & ~frames.held, np.bool_)
 
 
-def _scale(free: _Settled, frames: _Frames, travel: float) -> tuple[float | None, float]:
+def _scale(free: _Settled, frames: _Frames, travel: float, tick_s: float) -> tuple[float | None, float]:
     """Counts per serial turn with its standard uncertainty."""
     if not free.with_scale:
         return None, np.inf
     at = free.column("scale")
     scale = free.counts_per_turn + frames.sense * float(free.fitted.coefficients[at])
     scatter = np.sqrt(free.fitted.covariance[at, at])
-    bent = OWN_ERROR_TURNS * scale if travel < TURNS_FOR_HARMONICS else 0.0
-    return scale, float(np.hypot(scatter, (frames.unit / np.sqrt(12) + bent) / travel))
+    bent = OWN_ERROR_TURNS / 2 * scale if travel < TURNS_FOR_HARMONICS else 0.0
+    drawn = 0.0 if free.with_speed else float(np.ptp(frames.speed)) * USUAL_LATENCY_S / tick_s
+    return scale, float(np.hypot(scatter, (frames.unit / np.sqrt(12) + bent + drawn) / travel))
 
 
 def _latency(settled: _Settled, frames: _Frames) -> tuple[float, float]:
@@ -456,16 +550,16 @@ def _latency(settled: _Settled, frames: _Frames) -> tuple[float, float]:
     latency = float(settled.fitted.coefficients[at]) / fastest
     scatter = np.sqrt(settled.fitted.covariance[at, at]) / fastest
     spread = float(settled.fitted.spread[at]) * fastest
-    drawn = abs(latency) * (_speed_scatter(frames) / spread) ** 2 if spread > 0 else np.inf
-    return latency, float(np.sqrt(scatter**2 + frames.grid**2 + drawn**2))
+    drawn = abs(latency) * (_speed_scatter(frames, settled) / spread) ** 2 if spread > 0 else np.inf
+    return latency, float(np.sqrt(scatter**2 + frames.grid**2 + drawn**2 + settled.hidden**2 / 3))
 
 
-def _speed_scatter(frames: _Frames) -> float:
+def _speed_scatter(frames: _Frames, settled: _Settled) -> float:
     """Standard deviation of a speed reading: against the mean of its neighbours, and what the grid alone makes of a
     cycle of four counts between two edges, each rounded by grid / sqrt(12)."""
-    speed = frames.speed[~frames.held]
+    speed = settled.speed[~frames.held & ~settled.passing]
     off = speed[1:-1] - (speed[:-2] + speed[2:]) / 2
-    rounding = frames.grid / np.sqrt(6) / 4 * np.mean(frames.speed**2)
+    rounding = frames.grid / np.sqrt(6) / 4 * np.mean(speed**2)
     return float(max(np.sqrt(np.mean(off**2) / 1.5), rounding))
 
 
@@ -474,10 +568,16 @@ def _is_separable(settled: _Settled, frames: _Frames) -> bool:
         return False
     fastest = _fastest(frames)
     spread = float(settled.fitted.spread[settled.column("speed")]) * fastest
-    if spread <= max(SPEED_CONTRAST * _speed_scatter(frames), 1e-9 * fastest):
+    if spread <= max(SPEED_CONTRAST * _speed_scatter(frames, settled), 1e-9 * fastest):
         return False
     doubt = _latency(settled, frames)[1]
     return bool(doubt * np.sqrt(np.mean(frames.speed[settled.inlier] ** 2)) <= frames.unit)
+
+
+def _speed_is_nothing(frames: _Frames, tick_s: float) -> bool:
+    """The usual latency would not show in the speeds there were."""
+    low, high = np.percentile(frames.speed, [0.5, 99.5])
+    return bool((high - low) * USUAL_LATENCY_S / tick_s < frames.unit / 2)
 
 
 def _told(
@@ -489,11 +589,13 @@ def _told(
     if last.with_scale:
         per_turn += frames.sense * float(last.fitted.coefficients[0])
     latency, latency_doubt = _latency(last, frames) if last.with_speed else (0.0, np.inf)
+    known = last.with_speed and "latency_s" not in reasons
     levels = _offsets(frames, last)
     longest = int(np.argmax(last.fitted.weights))
-    aligned = frames.sense * (frames.counted - levels[last.fitted.segment] - latency * frames.speed) / per_turn
+    fitting = frames.counted + last.bend - levels[last.fitted.segment] - latency * last.speed
+    aligned = frames.sense * fitting / per_turn
     residual = (frames.turns - aligned) * 360
-    outliers = np.flatnonzero(~last.inlier)
+    outliers = np.flatnonzero(~last.inlier & ~last.passing)
     inside = residual[last.inlier]
     doubt = np.hypot(frames.serial_unit / np.sqrt(12), frames.grid / np.sqrt(6) * np.sqrt(np.mean(frames.speed**2)))
     split = maybe_split(inside, frames.turns[last.inlier])
@@ -512,11 +614,11 @@ def _told(
         scale_error=None if fitted_scale is None or sheet is None else fitted_scale / sheet - 1,
         scale_error_uncertainty=None if scale_doubt is None or sheet is None else scale_doubt / sheet,
         scale_wrong=scale.wrong,
-        offset_counts=float(levels[longest]),
-        offset_uncertainty_counts=_offset_doubt(frames, last, longest),
-        latency_s=latency * board.tick_s if last.with_speed else None,
-        latency_uncertainty_s=latency_doubt * board.tick_s if last.with_speed else None,
-        residual_deg=_spread_out(residual, frames.index, total),
+        offset_counts=float(levels[longest]) + (0.0 if known else latency * _mean_speed(frames, last, longest)),
+        offset_uncertainty_counts=_offset_doubt(frames, last, longest, known),
+        latency_s=latency * board.tick_s if known else None,
+        latency_uncertainty_s=latency_doubt * board.tick_s if known else None,
+        residual_deg=_spread_out(np.where(last.passing, np.nan, residual), frames.index, total),
         residual_rms_deg=float(np.sqrt(np.mean(inside**2))),
         residual_peak_deg=float(np.abs(inside).max()),
         residual_uncertainty_deg=float(doubt / per_turn * 360),
@@ -547,8 +649,15 @@ def _offsets(frames: _Frames, last: _Settled) -> FloatArray:
     return np.asarray(levels, np.float64)
 
 
-def _offset_doubt(frames: _Frames, last: _Settled, segment: int) -> float:
+def _mean_speed(frames: _Frames, last: _Settled, segment: int) -> float:
+    """What latency is multiplied with in the offset where it cannot be told."""
+    return float(last.fitted.means[segment, last.column("speed")]) * _fastest(frames) if last.with_speed else 0.0
+
+
+def _offset_doubt(frames: _Frames, last: _Settled, segment: int, latency_known: bool) -> float:
     lever = last.fitted.means[segment].copy()
+    if last.with_speed and not latency_known:
+        lever[last.column("speed")] = 0.0
     if last.with_scale:
         lever[0] += _middle(frames)
     carried = float(lever @ last.fitted.covariance @ lever)
@@ -565,14 +674,17 @@ def _steps(frames: _Frames, last: _Settled, offsets: FloatArray, modulus: int) -
     levers = np.diff(last.fitted.means, axis=0)
     carried = np.einsum("si,ij,sj->s", levers, last.fitted.covariance, levers)
     doubts = np.sqrt(last.noise**2 * last.fitted.together * (1 / weights[:-1] + 1 / weights[1:]) + carried)
-    kept = ~np.isin(after, frames.borders) & (np.abs(sizes) >= frames.unit / 2)
-    sound = np.where(frames.held, 0, np.arange(frames.index.size))
-    before = np.maximum.accumulate(sound)[after[kept] - 1]
-    last_time, first_time = frames.time[before], frames.time[after[kept]]
+    kept = ~np.isin(after, frames.borders) & (np.abs(sizes) >= steps.LEAST_STEP * frames.unit)
+    level = np.flatnonzero(~frames.held & ~last.passing)
+    at = np.searchsorted(level, after[kept])
+    at = np.clip(at, 1, level.size - 1)
+    before, first = level[at - 1], level[at]
+    last_time, first_time = frames.time[before], frames.time[first]
     return Steps(
         frames.index[before],
-        frames.index[after[kept]],
+        frames.index[first],
         last_time + (first_time - last_time) // 2,
         sizes[kept],
         doubts[kept],
+        np.isin(after[kept], frames.breaks),
     )

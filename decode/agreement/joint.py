@@ -20,13 +20,14 @@ the latency may be wrong by as much as that step would pull it.
 
 from __future__ import annotations
 
+import itertools
 import math
 from dataclasses import dataclass
 
 import numpy as np
 
 from decode.agreement.regression import PIECE, Design, invert
-from decode.agreement.steps import BLOCK, SIGNIFICANT
+from decode.agreement.steps import BLOCK, LEAST_STEP, SIGNIFICANT
 from decode.spans import BoolArray, FloatArray, IntArray
 
 MOST_PASSES = 64
@@ -34,18 +35,23 @@ LEAST_FREE = 1e-6
 """Part of a step's column that must be left by the other columns for it to be told from them at all."""
 QUARTILE = 0.3186
 """Lower quartile of the size of a standard normal value."""
-LEAST_AROUND, MOST_AROUND = 2, 30
+LEAST_AROUND, MOST_AROUND = 3, 30
 """Blocks on either side over which a step must be sharp, at the least and at the most."""
+SHARP = 5.0
+"""Standard deviations that a break must be, in a place where a step gains that much more already."""
+OUTSTANDING = 5.0
+"""Times the root mean square of what is left, block by block, that a step must be."""
 SAMPLE = 4096
-"""Places at which sharpness is worked out at a time; enough to know what is usual."""
-MOST_PLACES = 1 << 16
+"""Places at which sharpness is worked out at a time."""
+MOST_PLACES = 1 << 12
 
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Blocks:
     """Sums over blocks of rows. edges: (b + 1,) rows at which blocks begin, and the end. weights: (b,). sums:
     (b, c + 1) of the design and the target, weighted. products: (c + 1, c + 1) of all rows. middle: (b,) time of
-    each block, in its own unit. borders: (s,) blocks at which a level of its own begins, the first among them."""
+    each block, in its own unit. borders: (s,) blocks at which a level of its own begins, the first among them. noise:
+    standard deviation of a row."""
 
     edges: IntArray
     weights: FloatArray
@@ -53,31 +59,40 @@ class Blocks:
     products: FloatArray
     middle: FloatArray
     borders: IntArray
+    noise: float
 
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Trial:
     """What a step at the beginning of each block would do. segment: (b,) of each block. mean: (b,) of the residual.
-    pull: (b,) s'r. room: (b,) D, 0 where the other columns leave nothing. shift: (b, c) by how much a step of one
-    changes the coefficients if it is not fitted. noise: standard deviation of a row's residual."""
+    levels: (s,) of the segments. pull: (b,) s'r. room: (b,) D, 0 where the other columns leave nothing. shift: (b, c)
+    by how much a step of one changes the coefficients if it is not fitted."""
 
     segment: IntArray
     mean: FloatArray
+    levels: FloatArray
     pull: FloatArray
     room: FloatArray
     shift: FloatArray
-    noise: float
 
 
 def blocks_of(
-    target: FloatArray, design: Design, columns: int, weight: FloatArray, starts: IntArray, time: IntArray
+    target: FloatArray,
+    design: Design,
+    weight: FloatArray,
+    starts: IntArray,
+    tied: FloatArray,
+    time: IntArray,
+    noise: float,
 ) -> Blocks:
-    """Blocks of at most eight rows that end at `starts`; arguments as `regression.fit` takes them. time: (n,)."""
+    """Blocks of at most eight rows that begin at `starts` too; arguments as `regression.fit` takes them. time: (n,).
+    noise: standard deviation of a row, as `noise_of` gives it."""
+    columns = tied.size
     edges = np.union1d(np.arange(0, target.size, BLOCK), starts).astype(np.int64)
     sums = np.zeros((edges.size, columns + 2))
-    products = np.zeros((columns + 1, columns + 1))
+    products = np.diag(np.append(tied, 0.0))
     at = np.searchsorted(edges, np.arange(0, target.size + PIECE, PIECE))
-    for first, last in zip(at[:-1], at[1:], strict=True):
+    for first, last in itertools.pairwise(at.tolist()):
         if first == last:
             continue
         low, high = int(edges[first]), int(edges[last]) if last < edges.size else target.size
@@ -88,23 +103,36 @@ def blocks_of(
     elapsed = (time - time[0]) / max(1, int(time[-1] - time[0]))
     middle = np.add.reduceat(elapsed, edges) / np.diff(np.append(edges, target.size))
     borders = np.searchsorted(edges, starts)
-    return Blocks(np.append(edges, target.size), sums[:, -1], sums[:, :-1], products, middle, borders)
+    return Blocks(np.append(edges, target.size), sums[:, -1], sums[:, :-1], products, middle, borders, noise)
 
 
-def steps_in(blocks: Blocks, floor: float, unit: float) -> IntArray:
-    """(k,) rows at which a step begins, rising, to within a block. floor: least standard deviation of a row's
-    residual. unit: smallest step looked for, twice; both in the target's unit."""
+def steps_in(blocks: Blocks, unit: float) -> IntArray:
+    """(k,) rows at which a step begins, rising, to within a block. unit: what the coarser reading resolves."""
     cuts = blocks.borders
     for _ in range(MOST_PASSES):
-        trial = tried(blocks, cuts, floor)
+        trial = tried(blocks, cuts)
         fresh = _largest(trial, _gain(trial, blocks, cuts, unit))
         if fresh.size == 0:
             break
         cuts = np.union1d(cuts, fresh)
+    cuts = _outstanding(blocks, cuts)
     return np.asarray(blocks.edges[np.setdiff1d(cuts, blocks.borders)], np.int64)
 
 
-def tried(blocks: Blocks, cuts: IntArray, floor: float) -> Trial:
+def _outstanding(blocks: Blocks, cuts: IntArray) -> IntArray:
+    """`cuts` without the steps that do not stand out from what is left between all of them: there something else is
+    not described, and a step only follows it."""
+    while True:
+        trial = tried(blocks, cuts)
+        known = np.isfinite(trial.mean)
+        left = math.sqrt(float(np.average(trial.mean[known] ** 2, weights=blocks.weights[known])))
+        weak = np.setdiff1d(cuts[1:][np.abs(np.diff(trial.levels)) < OUTSTANDING * left], blocks.borders)
+        if weak.size == 0:
+            return cuts
+        cuts = np.setdiff1d(cuts, weak)
+
+
+def tried(blocks: Blocks, cuts: IntArray) -> Trial:
     """A step tried at every block, with levels of their own beginning at the blocks `cuts`."""
     weights, sums = blocks.weights, blocks.sums
     segment = np.repeat(np.arange(cuts.size), np.diff(np.append(cuts, weights.size)))
@@ -124,32 +152,51 @@ def tried(blocks: Blocks, cuts: IntArray, floor: float) -> Trial:
     room = share - np.einsum("bc,bc->b", shift, columns)
     room = np.where(room > LEAST_FREE * np.maximum(share, 1e-9), room, 0.0)
     mean = np.where(weights > 0, rest / np.where(weights > 0, weights, 1.0), np.nan)
-    return Trial(segment, mean, rest - np.cumsum(rest), room, shift, max(floor, _noise(mean, weights)))
+    levels = means[:, -1] - means[:, :-1] @ coefficients
+    return Trial(segment, mean, levels, rest - np.cumsum(rest), room, shift)
 
 
-def hidden_pull(trial: Trial, unit: float, column: int) -> float:
-    """By how much a step of a unit or more that is too small to be found may shift a coefficient; 0 where none is."""
-    open_ = trial.room > 0
-    size = SIGNIFICANT * trial.noise / np.sqrt(trial.room[open_])
-    pull = np.where(size > unit, size * np.abs(trial.shift[open_, column]), 0.0)
-    return float(pull.max(initial=0.0))
+def hidden_pull(blocks: Blocks, starts: IntArray, unit: float, column: int) -> float:
+    """By how much a step that is not told may shift a coefficient: one of a unit or more too small to be found, or one
+    that would gain enough but is no plain step. 0 where there is neither."""
+    trial = tried(blocks, np.searchsorted(blocks.edges, starts))
+    room = np.maximum(trial.room, LEAST_FREE)
+    least = SIGNIFICANT * blocks.noise / np.sqrt(room)
+    seen = np.abs(trial.pull) / room
+    size = np.where((seen > least) & (trial.room > 0), seen, np.where(least > unit, least, 0.0))
+    return float(np.max(np.abs(trial.shift[:, column]) * size, initial=0.0))
 
 
-def _noise(mean: FloatArray, weights: FloatArray) -> float:
-    """Standard deviation of a row from what each block is off the line through its neighbours: neither steps nor
-    slow bends enter there. The lower quartile, so that steps may be many."""
-    known = np.flatnonzero(weights > 0.5 * BLOCK)
-    if known.size < 3:
-        return 0.0
-    off = mean[known[1:-1]] - (mean[known[:-2]] + mean[known[2:]]) / 2
-    return float(np.quantile(np.abs(off), 0.25) / QUARTILE * math.sqrt(BLOCK / 1.5))
+def noise_of(residual: FloatArray, weight: FloatArray) -> float:
+    """Standard deviation of a row, as far as neighbouring rows, or blocks of rows where errors last, do not share it.
+
+    Rows: what each is off the line through its neighbours. Blocks: fourth differences, to which a bend is nothing.
+    Neither steps nor bends that last for some rows enter there, and being the lower quartile it bears many rows that
+    are off. residual: (n,) to within its steps. weight: (n,).
+    """
+    sound = weight > 0.5 * float(np.median(weight))
+    inside = sound[:-2] & sound[1:-1] & sound[2:]
+    single = lasting = 0.0
+    if np.count_nonzero(inside) >= BLOCK:
+        single = _scatter(residual[1:-1][inside] - (residual[:-2] + residual[2:])[inside] / 2, 1.5)
+    whole = residual.size // BLOCK * BLOCK
+    weights = weight[:whole].reshape(-1, BLOCK).sum(axis=1)
+    sums = (weight * residual)[:whole].reshape(-1, BLOCK).sum(axis=1)
+    filled = weights > 0.5 * BLOCK
+    if np.count_nonzero(filled) >= BLOCK:
+        lasting = _scatter(np.diff(sums[filled] / weights[filled], 4), 70.0 / BLOCK)
+    return max(single, lasting)
+
+
+def _scatter(differences: FloatArray, variance: float) -> float:
+    return float(np.quantile(np.abs(differences), 0.25)) / QUARTILE / math.sqrt(variance)
 
 
 def _gain(trial: Trial, blocks: Blocks, cuts: IntArray, unit: float) -> FloatArray:
     """What a step takes from the sum of squares, in variances; 0 where there is no step."""
     room = np.where(trial.room > 0, trial.room, 1.0)
-    gain = np.where(trial.room > 0, trial.pull**2 / room / trial.noise**2, 0.0)
-    able = (gain > SIGNIFICANT**2) & (np.abs(trial.pull) >= unit / 2 * room)
+    gain = np.where(trial.room > 0, trial.pull**2 / room / blocks.noise**2, 0.0)
+    able = (gain > SIGNIFICANT**2) & (np.abs(trial.pull) >= LEAST_STEP * unit * room)
     places = np.flatnonzero(able)
     places = np.sort(places[np.argsort(-gain[places], kind="stable")][:MOST_PLACES])
     kept = np.zeros(gain.size)
@@ -167,10 +214,7 @@ def _largest(trial: Trial, gain: FloatArray) -> IntArray:
 
 def _sharp(trial: Trial, blocks: Blocks, cuts: IntArray, unit: float, places: IntArray) -> BoolArray:
     """Where the residual has a break: a line with a step is fitted to the blocks around each place."""
-    near = min(max(LEAST_AROUND, math.ceil((SIGNIFICANT * trial.noise / unit) ** 2)), MOST_AROUND)
-    usual = np.linspace(0, blocks.weights.size - 1, min(SAMPLE, blocks.weights.size)).astype(np.int64)
-    sizes, variances = _broken_line(trial, blocks, cuts, usual, near)
-    typical = float(np.quantile(np.abs(sizes[variances > 0]), 0.25)) / QUARTILE if (variances > 0).any() else 0.0
+    near = min(max(LEAST_AROUND, math.ceil((SIGNIFICANT * blocks.noise / unit) ** 2)), MOST_AROUND)
     sharp = np.zeros(places.size, np.bool_)
     for low in range(0, places.size, SAMPLE):
         part = places[low : low + SAMPLE]
@@ -178,7 +222,7 @@ def _sharp(trial: Trial, blocks: Blocks, cuts: IntArray, unit: float, places: In
         thin = variance > 2 / (BLOCK * near) * 8
         if thin.any():
             size[thin], variance[thin] = _broken_line(trial, blocks, cuts, part[thin], MOST_AROUND)
-        bound = np.maximum(unit / 2, SIGNIFICANT * np.maximum(typical, 0.7 * trial.noise * np.sqrt(variance)))
+        bound = np.maximum(LEAST_STEP * unit, SHARP * blocks.noise * np.sqrt(variance))
         sharp[low : low + SAMPLE] = (variance > 0) & (np.abs(size) >= bound)
     return sharp
 
@@ -186,15 +230,21 @@ def _sharp(trial: Trial, blocks: Blocks, cuts: IntArray, unit: float, places: In
 def _broken_line(
     trial: Trial, blocks: Blocks, cuts: IntArray, places: IntArray, around: int
 ) -> tuple[FloatArray, FloatArray]:
-    """The step at each place of a line of one slope through `around` blocks on either side, in the place's segment,
-    and its variance in terms of a row's; the variance is 0 where it cannot be told."""
-    at = places[:, np.newaxis] + np.arange(-around, around)
+    """The step within each block and its variance in terms of a row's; 0 where it cannot be told.
+
+    With all else fitted along with the step, a line of one slope with a break goes through `around` blocks on either
+    side, in the same segment.
+    """
+    at = places[:, np.newaxis] + np.delete(np.arange(-around, around + 1), around)
     ends = np.append(cuts, blocks.weights.size)
     first, last = ends[trial.segment[places]], ends[trial.segment[places] + 1]
     inside = (at >= first[:, np.newaxis]) & (at < last[:, np.newaxis])
     at = np.clip(at, 0, blocks.weights.size - 1)
     weight = np.where(inside & np.isfinite(trial.mean[at]), blocks.weights[at], 0.0)
-    value = np.where(weight > 0, trial.mean[at], 0.0)
+    room = np.where(trial.room[places] > 0, trial.room[places], 1.0)
+    moved = (trial.pull[places] / room)[:, np.newaxis] * trial.shift[places]
+    fitted = (blocks.sums[at, :-1] @ moved[:, :, np.newaxis])[:, :, 0] / np.maximum(blocks.weights[at], 1e-9)
+    value = np.where(weight > 0, trial.mean[at] + fitted, 0.0)
     time = blocks.middle[at] - blocks.middle[places][:, np.newaxis]
     masses, times, values, square, cross = [], [], [], np.zeros(places.size), np.zeros(places.size)
     for side in (slice(None, around), slice(around, None)):

@@ -61,11 +61,13 @@ def fit(
     starts: IntArray,
     cell: IntArray,
     floor: float,
+    tied: FloatArray,
 ) -> Fitted:
     """Fit target = level of the segment + design @ coefficients.
 
     target, weight: (n,). starts: (s,) first row of each segment, starts[0] = 0. cell: (n,) below CELLS, the part of
-    the turn a row is in. floor: the least standard deviation that a single row can have.
+    the turn a row is in. floor: the least standard deviation that a single row can have. tied: (c,) weight of the
+    knowledge that a coefficient is zero, in rows; 0 where there is none.
     """
     segment = np.repeat(np.arange(starts.size), np.diff(np.append(starts, target.size)))
     sums = np.zeros((starts.size, columns + 2))
@@ -80,7 +82,7 @@ def fit(
     weights = sums[:, -1]
     means = sums[:, :-1] / np.where(weights > 0, weights, 1.0)[:, np.newaxis]
     products -= (means * weights[:, np.newaxis]).T @ means
-    inverse = invert(products[:-1, :-1])
+    inverse = invert(products[:-1, :-1] + np.diag(tied))
     coefficients = inverse @ products[:-1, -1]
     levels = means[:, -1] - means[:, :-1] @ coefficients
     residual, sandwiches, together = _second_pass(

@@ -76,6 +76,40 @@ class Rest:
         return np.where(t < self.duration / 2, self.speed_at_first * (1 - 2 * t / self.duration), 0.0)
 
 
+@dataclass(frozen=True)
+class Swing:
+    """To and fro about `start`, `quarter` quarters of a period on from where it stands furthest on, at time `at`: 1 for
+    the highest speed there, 2 for the speed rising through zero."""
+
+    amplitude: float
+    period: float
+    at: float
+    quarter: int
+    start: float = 0.0
+
+    def _phase(self, t):
+        return 2 * np.pi * (t - self.at) / self.period + (self.quarter - 2) * np.pi / 2
+
+    def turns(self, t):
+        return self.start - self.amplitude * np.cos(self._phase(t))
+
+    def speed(self, t):
+        return self.amplitude * 2 * np.pi / self.period * np.sin(self._phase(t))
+
+
+class Sum:
+    """Several motions on top of each other."""
+
+    def __init__(self, *parts):
+        self.parts = parts
+
+    def turns(self, t):
+        return sum(part.turns(t) for part in self.parts)
+
+    def speed(self, t):
+        return sum(part.speed(t) for part in self.parts)
+
+
 def edges(motion, duration_s: float, counts_per_turn: int, sense: int = 1, grid: int = GRID):
     """A/B edges of the motion: ticks as sampled on the grid, and the count after each; also the count at the start.
 
