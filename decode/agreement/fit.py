@@ -302,12 +302,22 @@ def _follows(words: IntArray, counts: FloatArray, slope: float, board: _Board) -
 
 
 def _held(same: BoolArray, other: FloatArray, margin: FloatArray, modulus: int | None) -> BoolArray:
-    """Frames in a run of equal readings during which the other reading went further than `margin`."""
+    """Frames in a run of equal readings during which the other reading went further than `margin`, and goes on: where
+    it went there at once and stands as well, both are on another level."""
     first = np.maximum.accumulate(np.where(np.concatenate([[True], ~same]), np.arange(other.size), 0))
     moved = other - other[first]
     if modulus is not None:
         moved = unwrap.wrapped_float(moved, modulus)
-    return np.asarray(np.abs(moved) > margin, np.bool_)
+    held = np.asarray(np.abs(moved) > margin, np.bool_)
+    rows = np.flatnonzero(held)
+    if rows.size == 0:
+        return held
+    begins = np.concatenate([[0], np.flatnonzero((np.diff(rows) > 1) | (np.diff(first[rows]) > 0)) + 1])
+    lengths = np.diff(np.append(begins, rows.size))
+    reach = np.maximum.reduceat(moved[rows], begins) - np.minimum.reduceat(moved[rows], begins)
+    standing = (lengths > 1) & (reach <= np.minimum.reduceat(margin[rows], begins))
+    held[rows[np.repeat(standing, lengths)]] = False
+    return held
 
 
 def _compared(frames: _Frames, total: int, board: _Board) -> Agreement:
@@ -489,6 +499,14 @@ def _segments(
         off = along - _levels(along, frames.held, starts)
         kept = _fitting(frames, off, floor)
     inner = np.setdiff1d(starts[1:], frames.borders)
+    repeated = np.setdiff1d(inner, frames.breaks)
+    repeated = repeated[frames.held[repeated - 1]]
+    repeated = repeated[np.abs((along - off)[repeated] - along[repeated - 1]) <= _tolerance(frames, off, floor)] - 1
+    if repeated.size:  # the word stayed the same when the count moved by the step
+        starts = np.union1d(np.setdiff1d(starts, repeated + 1), repeated).astype(np.int64)
+        off = along - _levels(along, frames.held, starts)
+        kept[repeated] = True
+        inner = np.setdiff1d(starts[1:], frames.borders)
     return starts, kept, steps.passing(along, along - off, ~kept & ~frames.held, starts, inner)
 
 
@@ -675,7 +693,7 @@ def _steps(frames: _Frames, last: _Settled, offsets: FloatArray, modulus: int) -
     carried = np.einsum("si,ij,sj->s", levers, last.fitted.covariance, levers)
     doubts = np.sqrt(last.noise**2 * last.fitted.together * (1 / weights[:-1] + 1 / weights[1:]) + carried)
     kept = ~np.isin(after, frames.borders) & (np.abs(sizes) >= steps.LEAST_STEP * frames.unit)
-    level = np.flatnonzero(~frames.held & ~last.passing)
+    level = np.flatnonzero((~frames.held | last.inlier) & ~last.passing)
     at = np.searchsorted(level, after[kept])
     at = np.clip(at, 1, level.size - 1)
     before, first = level[at - 1], level[at]
