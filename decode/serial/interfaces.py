@@ -161,7 +161,7 @@ def read_biss(bursts: Bursts, data: Edges, serial: Serial, rhythm: Rhythm, habit
     most = min(int(clocks.max(initial=0)), habit.clocks + n + LONGEST_WAIT)
     number = np.arange(most + habit.late + 2)
     drive = bursts.edge(2 * number + 1)
-    last = bursts.times[bursts.first + 2 * np.maximum(clocks, 1).astype(np.intp) - 1]
+    last = bursts.times[bursts.first + np.minimum(2 * np.maximum(clocks, 1).astype(np.intp), bursts.count) - 1]
     beyond = np.rint((number[None, :] - clocks[:, None] + 1) * rhythm.period).astype(np.int64)
     extended = np.where(drive >= 0, drive, last[:, None] + beyond)
     late = habit.phase >= LATE_PHASE * rhythm.period
