@@ -33,11 +33,13 @@ if TYPE_CHECKING:
     from decode.bench.scenario import Fault
     from decode.judgement.records import Report
     from decode.pipeline import Checked
+    from decode.sheet import Sheet
 
 PASS, FAIL, USAGE, UNDECIDED, BUG, INTERRUPTED, PIPE_CLOSED = 0, 1, InputError.exit_code, 3, 70, 130, 141
 EXIT_CODES = {"pass": PASS, "fail": FAIL, "undecided": UNDECIDED}
 DEBUG = "SHAFTPROOF_DEBUG"
-STANDARD_OUTPUT = "-"
+STANDARD_OUTPUT = STANDARD_INPUT = "-"
+UNITS = ("s", "ms", "us", "ns", "ps")
 
 TEMPLATE = """\
 [board]
@@ -157,7 +159,9 @@ _Width = Annotated[int | None, typer.Option("--width", min=40, help="Columns of 
 @app.command()
 def check(
     context: typer.Context,
-    capture: Annotated[str, typer.Argument(metavar="CAPTURE", help="The analyser's export.")],
+    capture: Annotated[
+        str, typer.Argument(metavar="CAPTURE", help="The analyser's export, gzip and zstd too; - is standard input.")
+    ],
     sheet: Annotated[
         str | None,
         typer.Option("--sheet", metavar="S.toml", help="What the board is meant to do (default: beside CAPTURE)."),
@@ -170,13 +174,32 @@ def check(
         str | None,
         typer.Option("--angles", metavar="FILE", help="Write serial and counted angle: .csv, .parquet or .npz."),
     ] = None,
+    start_s: Annotated[
+        str | None, typer.Option("--from", metavar="SECONDS", help="Look at the capture from this time on.")
+    ] = None,
+    stop_s: Annotated[str | None, typer.Option("--to", metavar="SECONDS", help="Look at it up to this time.")] = None,
+    rate: Annotated[
+        str | None, typer.Option("--rate", metavar="HZ", help="Samples per second, where the file has no times.")
+    ] = None,
+    unit: Annotated[
+        str | None, typer.Option("--unit", metavar="UNIT", help="Unit of the times: s ms us ns ps.")
+    ] = None,
+    threshold: Annotated[
+        str | None,
+        typer.Option("--threshold", metavar="LOW,HIGH", help="Volts: low at or below LOW, high at or above HIGH."),
+    ] = None,
     width: _Width = None,
 ) -> int:
     """Check a capture against its sheet: the main job. A FILE named - is standard output."""
     from decode.report.tables import expect_folder, expect_layout
+    from decode.sheet import load
 
-    if not Path(capture).exists():
+    if capture != STANDARD_INPUT and not Path(capture).exists():
         raise InputError("there is no such capture", file=capture)
+    if capture == STANDARD_INPUT and sheet is None:
+        raise InputError(
+            "nothing stands beside standard input", expected="--sheet S.toml", hint="name the sheet of the board"
+        )
     chosen = Path(sheet) if sheet is not None else expect_sheet_beside(Path(capture))
     targets = [target for target in (json, frames, angles) if target is not None]
     for target in targets:
@@ -189,7 +212,8 @@ def check(
     with _showing_progress() as progress:
         from decode.pipeline import check as run
 
-        checked = run(capture, chosen, progress=progress, command=context.obj)
+        board = with_options(load(chosen), start_s=start_s, stop_s=stop_s, rate=rate, unit=unit, threshold=threshold)
+        checked = run(capture, board, progress=progress, command=context.obj)
     report = checked.report if sheet is not None else _with_note(checked.report, chosen)
     _write(checked, report, json=json, frames=frames, angles=angles)
     if STANDARD_OUTPUT not in targets:
@@ -197,6 +221,57 @@ def check(
 
         render(report, _console(width))
     return EXIT_CODES[report.verdict]
+
+
+def with_options(
+    sheet: Sheet,
+    *,
+    start_s: str | None = None,
+    stop_s: str | None = None,
+    rate: str | None = None,
+    unit: str | None = None,
+    threshold: str | None = None,
+) -> Sheet:
+    """The sheet with what the command says of the capture in place of its own [capture].
+
+    Raises InputError for an option that cannot be read, or that the sheet could not say either.
+    """
+    from msgspec.structs import replace
+
+    from decode.sheet import expect_possible_capture
+
+    given: dict[str, Any] = {}
+    if start_s is not None or stop_s is not None:
+        old = sheet.capture.window_s or ("none", "none")
+        given["window_s"] = tuple(
+            kept if text is None else _expect_number(f"--{name}", text)
+            for name, text, kept in (("from", start_s, old[0]), ("to", stop_s, old[1]))
+        )
+    if rate is not None:
+        given["sample_rate_hz"] = _expect_number("--rate", rate)
+    if unit is not None:
+        if unit not in UNITS:
+            raise InputError("--unit is no unit of time", found=unit, expected=", ".join(UNITS))
+        given["time_unit"] = unit
+    if threshold is not None:
+        parts = threshold.split(",")
+        if len(parts) != 2:
+            raise InputError("--threshold needs two voltages", found=threshold, expected="LOW,HIGH, such as 1.2,1.8")
+        given["threshold_v"] = tuple(_expect_number("--threshold", part) for part in parts)
+    capture = replace(sheet.capture, **given)
+    expect_possible_capture(capture)
+    return replace(sheet, capture=capture)
+
+
+def _expect_number(option: str, text: str) -> float:
+    """A finite number. Raises InputError for anything else."""
+    try:
+        number = float(text)
+    except ValueError:
+        number = math.nan
+    if not math.isfinite(number):
+        raise InputError(f"{option} is not a number", found=text, expected="a decimal number such as 0.25 or 24e6")
+    return number
 
 
 def expect_sheet_beside(capture: Path) -> Path:
@@ -225,7 +300,7 @@ def _with_note(report: Report, sheet: Path) -> Report:
 
 def _expect_apart(targets: Sequence[str], inputs: Sequence[str]) -> None:
     """Raise InputError where two outputs, or an output and an input, are the same file."""
-    taken = {os.path.realpath(path): "an input of this command" for path in inputs}
+    taken = {os.path.realpath(path): "an input of this command" for path in inputs if path != STANDARD_INPUT}
     for target in targets:
         place = STANDARD_OUTPUT if target == STANDARD_OUTPUT else os.path.realpath(target)
         if place in taken:

@@ -45,6 +45,8 @@ KEYS_OF_SOME: dict[str, tuple[str, ...]] = {
 }
 """Which fields a field's key is for: elsewhere it would be skipped in silence."""
 
+Bound = float | Literal["none"]
+
 LONGEST_FRAME = 512
 LONGEST_FIELD = 64
 MOST_CYCLES = 10**9
@@ -64,11 +66,15 @@ class CaptureKeys(_Part, frozen=True, forbid_unknown_fields=True, kw_only=True):
     """[capture]: what the file itself does not say."""
 
     sample_rate_hz: float | None = None
-    """Rate of a file without a time column, or whose time column counts samples."""
+    """Rate of a file without a time column, or whose time column counts samples; beside times, their sampling step."""
     time_unit: Literal["s", "ms", "us", "ns", "ps"] | None = None
     """Unit of the time column where its header does not say."""
     threshold_v: tuple[float, float] | None = None
     """For a file of voltages: at or below the first a line is low, at or above the second high."""
+    port_base: Literal["binary", "decimal", "hexadecimal"] | None = None
+    """How the values of a port are written where their digits do not tell."""
+    window_s: tuple[Bound, Bound] | None = None
+    """Only this part of the capture, from and to, in seconds on its own axis; either may be "none"."""
 
 
 class Field(_Part, frozen=True, forbid_unknown_fields=True, kw_only=True):
@@ -169,9 +175,6 @@ class Incremental(_Part, frozen=True, forbid_unknown_fields=True, kw_only=True):
         return None if self.cycles_per_turn is None else 4 * self.cycles_per_turn
 
 
-Bound = float | Literal["none"]
-
-
 class Sheet(_Part, frozen=True, forbid_unknown_fields=True, kw_only=True):
     """A whole sheet. Build one from a file with `load`, from text with `from_toml`, or directly."""
 
@@ -232,6 +235,13 @@ def from_toml(text: str, *, file: str = "sheet") -> Sheet:
             expected=expected,
         )
     return sheet
+
+
+def expect_possible_capture(keys: CaptureKeys) -> None:
+    """Raises InputError for a value in [capture] that has the right type but cannot be."""
+    for path, problem, expected in _impossible_capture(keys):
+        found = getattr(keys, path.removeprefix("capture."))
+        raise InputError(problem, column=path, found=repr(found), expected=expected)
 
 
 def _refusal(error: msgspec.ValidationError, text: str, tree: dict[str, Any], file: str) -> InputError:
@@ -423,6 +433,11 @@ def _impossible_capture(keys: CaptureKeys) -> Iterator[tuple[str, str, str]]:
         yield "capture.sample_rate_hz", "an impossible sample rate", "hertz, above 0 and below 1e13"
     if keys.threshold_v is not None and not keys.threshold_v[0] <= keys.threshold_v[1]:
         yield "capture.threshold_v", "the thresholds are the wrong way round", "[low-going, high-going], rising"
+    start, stop = keys.window_s or ("none", "none")
+    if not isinstance(start, str) and not isinstance(stop, str) and not start < stop:
+        yield "capture.window_s", "the window is empty", "[from, to], rising"
+    if any(not isinstance(end, str) and not abs(end) < 1e15 for end in (start, stop)):
+        yield "capture.window_s", "an impossible time", "seconds"
 
 
 def _impossible_serial(serial: Serial) -> Iterator[tuple[str, str, str]]:

@@ -45,8 +45,9 @@ TURNS_FOR_SCALE = 0.25
 TOLERANCE = 6.0
 """Robust standard deviations within which a frame belongs to the fit."""
 OWN_ERROR_TURNS = 1.0 / 360
-"""What an encoder's own error may bend the scale by, over a travel too short to tell it from scale: half a degree,
-more than data sheets of mounted encoders allow. Common practice, no source."""
+"""Usual size of an encoder's own error once a turn, less by the square of the order for the harmonics; it matters only
+where the travel is too short to show it. Half of it bends the scale there. More than data sheets of mounted encoders
+allow. Common practice, no source."""
 USUAL_LATENCY_S = 100e-6
 """What latency may bend the scale by where the two cannot be told apart. Common practice, no source."""
 SPEED_CONTRAST = 5.0
@@ -57,7 +58,9 @@ SIGNIFICANT = 4.0
 LEAST_BEND = 0.01
 """Units by which what latency and acceleration do may still change from round to round."""
 ABRUPT = 16
+"""Changes of speed looked at singly for steps that they could hide."""
 MOST_FRAMES_LATE = 4
+"""Frames of latency up to which acceleration is taken into account."""
 MOST_ROUNDS = 12
 LEAST_SHARE = 1e-3
 

@@ -12,7 +12,7 @@ taken, then all is worked out anew, until no step is left.
 
 What is fitted never describes an encoder wholly, and what it misses bends smoothly; smooth bends gain much by a step
 as well. So a step must also be sharp: around it, over as few frames as the noise allows, two levels must be far
-better than a straight line without a break.
+better than a straight line without a break; and it must stand out from what is left once all steps are in.
 
 D also tells what may hide. Where even a step of a whole unit would not be found, because speed could stand for it,
 the latency may be wrong by as much as that step would pull it.

@@ -44,7 +44,8 @@ class Break:
 
 
 class BreakFinder:
-    """Finds breaks from row to row. `printed`: ticks that the last printed digit is worth."""
+    """Finds breaks from row to row. `printed`: ticks by which two intervals of one length may differ: what the last
+    printed digit is worth, or more where the times carry float noise."""
 
     def __init__(self, printed: int) -> None:
         self._printed = printed
@@ -56,6 +57,11 @@ class BreakFinder:
         self._repeated = 0
         self._longest = 0
         self._shortest = _LONGEST
+
+    def resume(self) -> None:
+        """Start anew behind rows that are missing: what comes next is not compared with what was fed."""
+        self._last = None
+        self._restart()
 
     def feed(self, times: IntArray, repeats: BoolArray) -> list[Break]:
         """The breaks among n further rows. repeats: (n,) whether all lines are as in the row above."""

@@ -1,20 +1,24 @@
 """Delimited text to spans: the reader of CSV captures.
 
 Blocks of whole rows come from `decode.capture.text`, pandas turns each into columns (only those asked for, and the
-time), and the columns become edges. What this module adds is the order of things: the earliest fault in the file is
-the one reported, breaks of the time axis end a span, and rows that share the last time of a block wait for the next
-one, so that no edge ever lies on the far side of its span's end.
+time), and the columns become edges. What this module adds is the order of things: rows that cannot be used are left out
+(`decode.capture.damage`), breaks of the time axis end a span, and rows that share the last time of a block wait for the
+next one, so that no edge ever lies on the far side of its span's end.
+
+Rows ahead of a window are looked at for their time alone, unless a line's level may depend on all rows before it
+(voltages between their thresholds, a row per change of one line). Reading ends with the first row behind the window.
 """
 
 from __future__ import annotations
 
 import csv
-import hashlib
 import io
+import re
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass, field
+from dataclasses import replace as with_changes
 from fractions import Fraction
-from pathlib import Path
+from itertools import pairwise
 
 import numpy as np
 import pandas as pd
@@ -22,16 +26,25 @@ import pyarrow as pa
 
 from decode.anomalies import Anomalies, Severity
 from decode.capture.breaks import Break, BreakFinder
-from decode.capture.dialect import Dialect, read_dialect
-from decode.capture.levels import LevelError, LevelReader
+from decode.capture.columns import THRESHOLD_HINT, Column, refuse_column, rule_of
+from decode.capture.damage import Damage
+from decode.capture.dialect import Dialect, rate_text, read_dialect
+from decode.capture.levels import NONE, LevelReader, LevelRule, filled, is_missing, is_number
+from decode.capture.names import without_unit
+from decode.capture.sampling import Intervals
+from decode.capture.stream import Reading, Source
 from decode.capture.text import Block, read_blocks
-from decode.capture.time_axis import TimeError, to_ticks
+from decode.capture.time_axis import Ticks, explain, to_ticks
+from decode.capture.window import Window
 from decode.errors import InputError, maybe_nearest
 from decode.sheet import CaptureKeys
-from decode.spans import Edges, IntArray, LevelArray, Span
+from decode.spans import UNKNOWN, BoolArray, Edges, IntArray, LevelArray, Span
 
 MOST_REVERSALS = 1000
 """A time column that falls more often than this is not one."""
+
+_MOST_NAMES = 1000
+_BIT = re.compile(r"(.+?)\s*\[\s*(\d{1,3})\s*\]")
 
 
 class SpanBuilder:
@@ -40,8 +53,9 @@ class SpanBuilder:
     An edge at the last time seen waits, since further rows may share that time: a span ends before it.
     """
 
-    def __init__(self, joined: bool) -> None:
+    def __init__(self, joined: bool, initial: dict[str, int] | None = None) -> None:
         self._joined = joined
+        self._initial = initial or {}
         self._start: int | None = None
         self._last = 0
         self._waiting: dict[str, Edges] = {}
@@ -50,7 +64,9 @@ class SpanBuilder:
         """Take in n >= 1 rows; the span that ends at the last of them, or None where time has not moved on."""
         if self._start is None:
             self._start = int(times[0])
-            self._waiting = {name: Edges.none(int(column[0])) for name, column in levels.items()}
+            self._waiting = {
+                name: Edges.none(self._initial.get(name, int(column[0]))) for name, column in levels.items()
+            }
         for name, column in levels.items():
             waiting = self._waiting[name]
             self._waiting[name] = waiting.then(Edges.from_samples(times, column, waiting.final))
@@ -73,24 +89,6 @@ class SpanBuilder:
             yield Span(self._start, self._last + 1, self._waiting, self._joined)
 
 
-@dataclass(slots=True)
-class _Tally:
-    """What reading found out so far."""
-
-    rows: int = 0
-    bytes: int = 0
-    first: int = 0
-    last: int = 0
-    grid: int = 0
-    blank: int = 0
-    comments: int = 0
-    rounded: int | None = None
-    cut_short: int | None = None
-    unused: tuple[str, ...] = ()
-    reversals: int = 0
-    breaks: list[_Place] = field(default_factory=list)
-
-
 @dataclass(frozen=True, slots=True)
 class _Place:
     """A break with where it is: the time of the row above it, its physical line, how many lines differ behind it."""
@@ -102,28 +100,70 @@ class _Place:
     changed: int
 
 
+@dataclass(slots=True)
+class _Tally:
+    """What reading found out so far."""
+
+    rows: int = 0
+    first: int = 0
+    last: int = 0
+    intervals: Intervals = field(default_factory=Intervals)
+    blank: int = 0
+    comments: int = 0
+    rounded: int | None = None
+    cut_short: int | None = None
+    unused: tuple[str, ...] = ()
+    reversals: int = 0
+    breaks: list[_Place] = field(default_factory=list)
+    damage: Damage = field(default_factory=Damage)
+    seen_first: int | None = None
+    seen_last: int = 0
+
+
 class DelimitedCapture:
     """A CSV capture. See `decode.capture.source.Capture` for what the attributes are."""
 
-    def __init__(self, path: Path, keys: CaptureKeys, rows_per_span: int) -> None:
-        self.file = str(path)
-        self._path = path
-        self._keys = keys
+    def __init__(self, source: Source, keys: CaptureKeys, rows_per_span: int) -> None:
+        self.file = source.file
+        self._source = source
         self._rows_per_span = rows_per_span
-        self._dialect: Dialect = read_dialect(path, keys)
+        self._dialect: Dialect = read_dialect(source, keys)
+        self._window = Window.of(keys, self._dialect.tick)
+        self._keys = keys
         self._tally = _Tally()
-        self.layout: str = self._dialect.layout
-        self.columns: tuple[str, ...] = tuple(self._dialect.names[index] for index in self._dialect.signals)
-        self.tick: Fraction = self._dialect.tick
+        self._reading: Reading | None = None
+        dialect = self._dialect
+        self.layout: str = dialect.layout
+        self._by_name: dict[str, Column] = {dialect.names[column.index]: column for column in dialect.columns}
+        self.columns: tuple[str, ...] = tuple(self._by_name if dialect.long is None else dialect.long.lines)
+        self.tick: Fraction = dialect.tick
         self.digest = ""
 
+    # --- lines ---
+
     def column(self, line: str | int) -> str:
-        """The name of the column that an entry of [lines] means. Raises InputError where there is none."""
-        found = self._maybe_column(line)
+        """The name of the line that an entry of [lines] means. Raises InputError where there is none, or where what
+        it names cannot be a line."""
+        name, bit = self._place(line)
+        if self._dialect.long is None:
+            self._rule(name, bit)
+        return name if bit is None else f"{name}[{bit}]"
+
+    def _place(self, line: str | int) -> tuple[str, int | None]:
+        found = self._maybe_name(line)
         if found is not None:
-            return found
+            return found, None
+        match = _BIT.fullmatch(line) if isinstance(line, str) and self._dialect.long is None else None
+        found = self._maybe_name(match.group(1)) if match is not None else None
+        if match is not None and found is not None:
+            return found, int(match.group(2))
         nearest = maybe_nearest(str(line), self.columns)
-        raise InputError(
+        if self._dialect.long is not None and isinstance(line, str) and nearest is None:
+            return line, None  # it may come in a later row; if it does not, the end of the reading says so
+        raise self._no_line(line, nearest)
+
+    def _no_line(self, line: str | int, nearest: str | None) -> InputError:
+        return InputError(
             f"the capture has no line {line!r}" if isinstance(line, str) else f"the capture has no line {line}",
             file=self.file,
             found=f"lines {', '.join(self.columns)}",
@@ -131,14 +171,51 @@ class DelimitedCapture:
             hint=f"did you mean {nearest!r}?" if nearest else "correct [lines] in the sheet",
         )
 
-    def _maybe_column(self, line: str | int) -> str | None:
+    def _maybe_name(self, line: str | int) -> str | None:
         if isinstance(line, int):
-            index = line - 1
-            return self._dialect.names[index] if index in self._dialect.signals else None
+            return self._maybe_numbered(line)
         if line in self.columns:
             return line
-        alike = [name for name in self.columns if name.strip().lower() == line.strip().lower()]
-        return alike[0] if len(alike) == 1 else None
+        wanted = line.strip().lower()
+        for plain in (str.strip, without_unit):
+            alike = [name for name in self.columns if plain(name).strip().lower() == wanted]
+            if alike:
+                return alike[0] if len(alike) == 1 else None
+        return None
+
+    def _maybe_numbered(self, number: int) -> str | None:
+        """The line with the number of a column. Raises InputError where another column has that number for a name."""
+        if self._dialect.long is not None:
+            return str(number) if str(number) in self.columns else None
+        names = self._dialect.names
+        at = names[number - 1] if 0 < number <= len(names) else None
+        if str(number) in self._by_name and at != str(number):
+            raise InputError(
+                f"line {number} may be the column of that name or the column of that number",
+                file=self.file,
+                found=f"a column named {number}; column number {number} is {at}",
+                expected="the name in double quotes",
+                hint=f'write "{number}" or "{at}" in [lines]',
+            )
+        return at if at in self._by_name else None
+
+    def _rule(self, name: str, bit: int | None) -> LevelRule:
+        """How a line stands in the table. Raises InputError where it does not."""
+        long = self._dialect.long
+        if long is not None:
+            level = next(column for column in self._dialect.columns if column.index == long.level)
+            return LevelRule(
+                long.level,
+                level.thresholds,
+                line=name,
+                names=long.names,
+                initial=long.lines.get(name, UNKNOWN),
+            )
+        column = self._by_name[name]
+        rule = rule_of(column, bit)
+        if rule is None:
+            raise refuse_column(column, name, bit, self._dialect.texts.get(column.index, ""), self.file)
+        return rule
 
     # --- known once the spans are exhausted ---
 
@@ -148,8 +225,8 @@ class DelimitedCapture:
 
     @property
     def part_read(self) -> float:
-        """How much of the file the spans so far came from, 0 to 1."""
-        return min(1.0, self._tally.bytes / max(1, self._path.stat().st_size))
+        """How much of the file the spans so far came from, 0 to 1; 0 of standard input."""
+        return 0.0 if self._reading is None else self._source.part(self._reading)
 
     @property
     def first(self) -> int:
@@ -161,11 +238,34 @@ class DelimitedCapture:
 
     @property
     def grid(self) -> int:
-        return 1 if self._dialect.counted else self._tally.grid or self._dialect.grid
+        if self._dialect.counted:
+            return 1
+        stated = self._maybe_stated_step()
+        if stated is not None:
+            return max(1, round(stated))
+        return max(1, round(self._intervals.step(self._dialect.scale.printed).ticks))
+
+    @property
+    def _intervals(self) -> Intervals:
+        return self._tally.intervals if self._tally.intervals.shortest.size else self._dialect.head
+
+    def _maybe_stated_step(self) -> Fraction | None:
+        """The stated sampling step in ticks, unless two rows stand closer."""
+        rate = self._dialect.rate
+        if rate is None or self._dialect.counted:
+            return None
+        step = 1 / (rate * self.tick)
+        shortest = self._intervals.shortest
+        closest = int(shortest[0]) if shortest.size else None
+        return step if closest is None or closest + self._dialect.scale.printed >= step else None
 
     @property
     def notes(self) -> list[str]:
-        tally, notes = self._tally, list(self._dialect.notes)
+        tally, notes = self._tally, [*self._dialect.notes, *self._step_notes()]
+        if not self._window.is_open:
+            start, stop = self._keys.window_s or ("none", "none")
+            ends = [f"from {start:.12g} s"] * (start != "none") + [f"to {stop:.12g} s"] * (stop != "none")
+            notes.append(f"only the rows {' '.join(ends)} were looked at")
         if tally.unused:
             notes.append(f"columns not used: {', '.join(tally.unused)}")
         if tally.blank:
@@ -177,14 +277,34 @@ class DelimitedCapture:
         if tally.rounded is not None:
             tick = np.format_float_scientific(float(self.tick), trim="-", exp_digits=1)
             notes.append(f"times finer than {tick} s were rounded to it, the first in line {tally.rounded}")
+        notes += tally.damage.notes()
         if tally.cut_short is not None:
             notes.append(f"the last row, line {tally.cut_short}, is cut short and was dropped")
+        samples = self._dialect.samples
+        if self._dialect.every_sample and self._window.is_open and samples not in (None, tally.rows):
+            notes.append(f"the lines above the table promise {samples} samples; there are {tally.rows}")
         return notes
+
+    def _step_notes(self) -> list[str]:
+        """What the sampling step was found from, where it is not the common divisor of the times."""
+        dialect = self._dialect
+        if dialect.counted:
+            return []
+        if dialect.rate is not None:
+            used = self._maybe_stated_step() is not None
+            told = f"{rate_text(dialect.rate)}, {dialect.rate_by}"
+            return [f"sampled at {told}"] if used else [f"the sample rate of {told}, is not used: rows stand closer"]
+        step = self._intervals.step(dialect.scale.printed)
+        if step.is_exact:
+            return []
+        seconds = step.ticks * float(self.tick)
+        return [f"the sampling step is taken to be {seconds:.4g} s: all times fit multiples of it"]
 
     @property
     def anomalies(self) -> list[Anomalies]:
-        reversals = [place for place in self._tally.breaks if place.kind == "time_reversal"]
-        gaps = [place for place in self._tally.breaks if place.kind == "time_gap"]
+        inside = [place for place in self._tally.breaks if self._window.holds(place.time)]
+        reversals = [place for place in inside if place.kind == "time_reversal"]
+        gaps = [place for place in inside if place.kind == "time_gap"]
         found = (
             self._anomalies("time_reversal", "back_s", None, reversals),
             self._anomalies("time_gap", "gap_s", None, [gap for gap in gaps if gap.changed != 1]),
@@ -209,91 +329,215 @@ class DelimitedCapture:
     def spans(self, columns: Sequence[str]) -> Iterator[Span]:
         """The capture as consecutive spans with the edges of `columns` (names as `column` gives them).
 
-        Each call reads the file anew. Raises InputError, at the latest when the row at fault is reached.
+        Each call reads the file anew. Raises InputError, at the latest at the end of the file.
         """
-        reading = _Reading(self.file, self._dialect, self._keys, [self.column(name) for name in columns])
+        places = [self._place(name) for name in columns]
+        rules = {name: self._rule(*place) for name, place in zip(map(self.column, columns), places, strict=True)}
+        reading = _Reading(self.file, self._dialect, rules, self._window)
         self._tally = reading.tally
-        digest = hashlib.sha256()
-        for block in read_blocks(self._path, self._dialect.shape, self._rows_per_span, digest):
-            yield from reading.feed(block)
-        yield from reading.finish()
-        self.digest = digest.hexdigest()
+        self._reading = stream = self._source.open()
+        try:
+            for block in read_blocks(stream, self.file, self._dialect.shape, self._rows_per_span):
+                yield from reading.feed(block)
+                if reading.is_over:
+                    stream.drain()
+                    break
+            yield from reading.finish()
+        finally:
+            stream.close()
+        absent = reading.absent()
+        if absent is not None:
+            raise self._no_line(absent, None)
+        self.digest = stream.digest
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class _Rows:
+    """n rows that can be used: ticks, codes by line, physical lines; fresh: (n,) rows are missing ahead of this one."""
+
+    times: IntArray
+    codes: dict[str, LevelArray]
+    numbers: IntArray
+    fresh: BoolArray
 
 
 class _Reading:
     """One pass over the rows of a capture."""
 
-    def __init__(self, file: str, dialect: Dialect, keys: CaptureKeys, columns: Sequence[str]) -> None:
+    def __init__(self, file: str, dialect: Dialect, rules: dict[str, LevelRule], window: Window) -> None:
         self._file = file
         self._dialect = dialect
-        self._indexes = {name: dialect.names.index(name) for name in columns}
-        self._readers = {name: LevelReader(keys.threshold_v, dialect.decimal) for name in columns}
-        self._finder = BreakFinder(dialect.scale.printed)
-        self._builder = SpanBuilder(joined=True)
+        self._window = window
+        self._readers = {name: LevelReader(rule, dialect.shape.decimal) for name, rule in rules.items()}
+        self._finder = BreakFinder(dialect.even)
+        initial = {name: rule.initial for name, rule in rules.items() if rule.line is not None}
+        self._builder = SpanBuilder(joined=True, initial=initial)
+        self._levels = {name: rule.initial for name, rule in rules.items() if rule.holds}
+        self._seen: dict[str, int] = dict(self._levels)
         self._above: dict[str, LevelArray] = {}
         self._above_time = 0
-        self.tally = _Tally(
-            unused=tuple(dialect.names[i] for i in dialect.signals if dialect.names[i] not in self._indexes)
-        )
+        self._is_damaged = False
+        self._names: set[str] = set(dialect.long.lines) if dialect.long is not None else set()
+        self._skips = window.start is not None and not self._levels
+        self._held: Block | None = None
+        self._had_span = False
+        used = {dialect.names[rule.column] for rule in rules.values()}
+        unused = tuple(dialect.names[c.index] for c in dialect.columns if dialect.names[c.index] not in used)
+        self.is_over = False
+        self.tally = _Tally(unused=unused if dialect.long is None else ())
 
     def feed(self, block: Block) -> Iterator[Span]:
-        self._count(block)
-        if block.numbers.size:
-            times, codes = self._columns(block)
-            yield from self._spans(times, codes, block.numbers)
-        if block.ragged is not None:
-            raise self._ragged(*block.ragged)
+        narrowed = block if self._window.is_open else self._maybe_narrowed(block)
+        if narrowed is None:
+            return
+        self._count(narrowed)
+        rows = self._rows(narrowed)
+        starts = [0, *(int(place) for place in np.flatnonzero(rows.fresh) if place), rows.times.size]
+        for start, stop in pairwise(starts):
+            if start < stop:
+                part = slice(start, stop)
+                codes = {name: column[part] for name, column in rows.codes.items()}
+                yield from self._told(
+                    self._stretch(rows.times[part], codes, rows.numbers[part], bool(rows.fresh[start]))
+                )
 
     def finish(self) -> Iterator[Span]:
-        if not self.tally.rows:
+        tally = self.tally
+        if not tally.rows:
+            if tally.damage.rows:
+                tally.damage.refuse(0)
+            if tally.seen_first is not None:
+                raise self._outside()
             raise InputError(
                 "the capture holds no whole row",
                 file=self._file,
                 expected="a row per change or per sample",
                 hint="export the capture again",
             )
-        yield from self._builder.last_span()
+        tally.damage.refuse(tally.rows)
+        if self._dialect.long is not None:
+            tally.unused = tuple(sorted(self._names - {reader.rule.line for reader in self._readers.values()}))
+        tally.first, tally.last = self._window.clipped(tally.first), self._window.clipped(tally.last)
+        yield from self._told(self._builder.last_span())
+        if not self._had_span:
+            raise self._outside()
+
+    def absent(self) -> str | None:
+        """A line that was asked for and that no row names."""
+        lines = [reader.rule.line for reader in self._readers.values() if reader.rule.line is not None]
+        seen = {name.lower() for name in self._names}
+        return next((line for line in lines if line.lower() not in seen), None)
+
+    def _told(self, spans: Iterator[Span]) -> Iterator[Span]:
+        """What the window leaves of the spans."""
+        for span in spans:
+            cut = self._window.maybe_cut(span)
+            if cut is not None:
+                yield cut if self._had_span else with_changes(cut, joined=True)
+                self._had_span = True
+
+    def _outside(self) -> InputError:
+        tick = self._dialect.tick
+        first, last = (float((end or 0) * tick) for end in (self.tally.seen_first, self.tally.seen_last))
+        return InputError(
+            "no row of the capture lies in the window",
+            file=self._file,
+            found=f"rows from {first:.12g} s on" if self.is_over else f"rows from {first:.12g} s to {last:.12g} s",
+            expected="a window, --from and --to, in which there are rows",
+            hint="times are those of the capture's own axis",
+        )
 
     def _count(self, block: Block) -> None:
-        self.tally.bytes += len(block.rows)
-        self.tally.blank += block.blank
-        self.tally.comments += block.comments
+        self.tally.blank += int(block.blank.size)
+        self.tally.comments += int(block.comments.size)
         if block.cut_short is not None:
             self.tally.cut_short = block.cut_short
 
+    # the window
+
+    def _maybe_narrowed(self, block: Block) -> Block | None:
+        """What the window needs of a block, or None for nothing; `is_over` is set at the first row behind it."""
+        if not block.numbers.size:
+            return None if self._skips else block
+        time = self._dialect.time
+        found = self._times(self._frame(block, () if time is None else (time,)), block)
+        good = np.ones(block.numbers.size, np.bool_) if found.bad is None else ~found.bad
+        self._look(found.ticks[good])
+        first = 0
+        if self._skips:
+            assert self._window.start is not None
+            inside = np.flatnonzero(good & (found.ticks >= self._window.start))
+            before = np.flatnonzero(good[: inside[0]] if inside.size else good)
+            if before.size:
+                self._held = block.row(int(before[-1]))
+            if not inside.size:
+                return None
+            self._skips = False
+            first = int(before[-1]) if before.size else 0
+        held, self._held = (None if first else self._held), None
+        behind = np.flatnonzero(good[first:] & (found.ticks[first:] >= self._stop()))
+        if not behind.size:
+            kept = block.between(first, block.numbers.size)
+        else:
+            self.is_over = True
+            kept = block.between(first, first + int(behind[0]) + 1).ended()
+        return kept if held is None or held.numbers[0] == kept.numbers[0] else kept.behind(held)
+
+    def _stop(self) -> float:
+        return np.inf if self._window.stop is None else self._window.stop
+
+    def _look(self, ticks: IntArray) -> None:
+        """Remember what times there are, also outside the window."""
+        if ticks.size:
+            tally = self.tally
+            first, last = int(ticks.min()), int(ticks.max())
+            tally.seen_first = first if tally.seen_first is None else min(tally.seen_first, first)
+            tally.seen_last = last if tally.seen_first == first else max(tally.seen_last, last)
+
     # cells to numbers
 
-    def _columns(self, block: Block) -> tuple[IntArray, dict[str, LevelArray]]:
-        """(ticks, codes by column) of a block's rows. Raises InputError for the cell at fault that stands first."""
-        frame = self._frame(block)
-        codes: dict[str, LevelArray] = {}
-        faults: list[tuple[int, InputError]] = []
-        times = np.empty(0, np.int64)
-        try:
-            times = self._times(frame, block)
-        except TimeError as error:
-            faults.append((error.position, self._time_fault(error, frame, block)))
-        for name, reader in self._readers.items():
-            try:
-                codes[name] = reader.codes(frame[self._indexes[name]])
-            except LevelError as error:
-                faults.append((error.position, self._level_fault(error, name, block)))
-        if faults:
-            raise min(faults, key=lambda fault: fault[0])[1]
-        return times, codes
+    def _rows(self, block: Block) -> _Rows:
+        """The rows of a block that can be used; the others go into the tally's damage."""
+        frame = self._frame(block, self._used())
+        found = self._times(frame, block)
+        codes = {name: reader.codes(frame) for name, reader in self._readers.items()}
+        self._meet_names(frame)
+        bad = np.zeros(block.numbers.size, np.bool_) if found.bad is None else found.bad.copy()
+        for column in codes.values():
+            bad |= column == NONE
+        if found.rounded is not None and self.tally.rounded is None:
+            self.tally.rounded = int(block.numbers[found.rounded])
+        if not (self._is_damaged or bad.any() or block.broken.size):
+            return _Rows(found.ticks, codes, block.numbers, np.zeros(block.numbers.size, np.bool_))
+        self._tell_damage(block, frame, found, codes, bad)
+        lost = np.sort(np.concatenate([block.broken, block.numbers[bad]]))
+        numbers = block.numbers[~bad]
+        ahead = np.searchsorted(lost, numbers)
+        fresh = np.diff(ahead, prepend=0) > 0
+        if fresh.size:
+            fresh[0] |= self._is_damaged
+        self._is_damaged = bool(lost.size > ahead[-1]) if fresh.size else self._is_damaged or bool(lost.size)
+        return _Rows(found.ticks[~bad], {name: column[~bad] for name, column in codes.items()}, numbers, fresh)
 
-    def _frame(self, block: Block) -> pd.DataFrame:
-        shape, time = self._dialect.shape, self._dialect.time
-        kinds: dict[int, str] = dict.fromkeys(self._indexes.values(), "category")
-        if time is not None:
-            kinds[time] = "str"
+    def _used(self) -> tuple[int, ...]:
+        rules = [reader.rule for reader in self._readers.values()]
+        indexes = {rule.column for rule in rules} | {rule.names for rule in rules if rule.names is not None}
+        return tuple(sorted(indexes | ({self._dialect.time} if self._dialect.time is not None else set())))
+
+    def _frame(self, block: Block, columns: Sequence[int]) -> pd.DataFrame:
+        shape = self._dialect.shape
+        plain = {self._dialect.time} | {
+            reader.rule.column for reader in self._readers.values() if reader.rule.thresholds is not None
+        }
+        if not block.rows:
+            return pd.DataFrame({index: pd.Series([], dtype="category") for index in columns})
         return pd.read_csv(
             io.BytesIO(block.rows),
             sep=r"\s+" if shape.delimiter == " " else shape.delimiter,
             header=None,
             names=range(shape.cells),
-            usecols=sorted(kinds),
-            dtype=kinds,
+            usecols=sorted(columns),
+            dtype={index: "str" if index in plain else "category" for index in columns},
             index_col=False,
             na_filter=False,
             quoting=csv.QUOTE_NONE,
@@ -303,53 +547,153 @@ class _Reading:
             encoding="latin-1",
         )
 
-    def _times(self, frame: pd.DataFrame, block: Block) -> IntArray:
-        count, time = block.numbers.size, self._dialect.time
+    def _times(self, frame: pd.DataFrame, block: Block) -> Ticks:
+        time = self._dialect.time
         if time is None:
-            return np.arange(self.tally.rows, self.tally.rows + count, dtype=np.int64)
-        times, rounded = to_ticks(pa.array(frame[time], type=pa.string()), self._dialect.scale)
-        if rounded is not None and self.tally.rounded is None:
-            self.tally.rounded = int(block.numbers[rounded])
-        return times
+            return Ticks(block.places)
+        return to_ticks(pa.array(frame[time], type=pa.string()), self._dialect.scale)
+
+    def _meet_names(self, frame: pd.DataFrame) -> None:
+        long = self._dialect.long
+        if long is not None and len(self._names) < _MOST_NAMES and long.names in frame:
+            self._names |= {str(name).strip() for name in frame[long.names].cat.categories}
+
+    # damage
+
+    def _tell_damage(
+        self, block: Block, frame: pd.DataFrame, found: Ticks, codes: dict[str, LevelArray], bad: BoolArray
+    ) -> None:
+        damage, before = self.tally.damage, self.tally.damage.rows
+        faults = []
+        if block.broken.size:
+            ragged = block.cells != self._dialect.shape.cells
+            damage.add("a wrong number of cells", block.broken[ragged])
+            damage.add("a NUL byte", block.broken[~ragged])
+            faults.append(self._ragged(int(block.broken[0]), int(block.cells[0])))
+        late = found.bad if found.bad is not None else np.zeros(bad.size, np.bool_)
+        if late.any():
+            damage.add("no time", block.numbers[late])
+            faults.append(self._time_fault(int(np.argmax(late)), frame, block))
+        unread = bad & ~late
+        if unread.any():
+            damage.add("a value that is no level", block.numbers[unread])
+            position = int(np.argmax(unread))
+            name = next(name for name, column in codes.items() if column[position] == NONE)
+            faults.append(self._level_fault(position, name, frame, block))
+        if faults:
+            damage.keep(faults)
+            places = np.sort(np.concatenate([block.broken_places, block.places[bad]]))
+            damage.refuse_early(before, places + 1)
+
+    def _time_fault(self, position: int, frame: pd.DataFrame, block: Block) -> InputError:
+        time = self._dialect.time
+        assert time is not None
+        text = str(frame[time].iloc[position])
+        problem, expected = explain(text, self._dialect.scale)
+        return InputError(
+            problem,
+            file=self._file,
+            row=int(block.numbers[position]),
+            column=self._dialect.names[time],
+            found=repr(text),
+            expected=expected,
+            hint="remove or repair this row",
+        )
+
+    def _level_fault(self, position: int, name: str, frame: pd.DataFrame, block: Block) -> InputError:
+        rule = self._readers[name].rule
+        text = str(frame[rule.column].iloc[position])
+        if is_missing(text):
+            hint = "name another column in [lines], or export the capture again"
+        elif rule.base is not None:
+            hint = '[capture] port_base = "binary", "decimal" or "hexadecimal" says how port values are written'
+        elif is_number(text, self._dialect.shape.decimal):
+            hint = THRESHOLD_HINT
+        else:
+            hint = "name another column in [lines], or repair this row"
+        return InputError(
+            "a value that is not a level",
+            file=self._file,
+            row=int(block.numbers[position]),
+            column=name,
+            found=repr(text),
+            expected="a port value" if rule.base is not None else "0 or 1, or x, z or u where the level is not known",
+            hint=hint,
+        )
+
+    def _ragged(self, row: int, cells: int) -> InputError:
+        expected = self._dialect.shape.cells
+        fewer = "a row with too few cells" if cells < expected else "a row with too many cells"
+        return InputError(
+            "a NUL byte within a row" if cells == expected else fewer,
+            file=self._file,
+            row=row,
+            found=f"{cells} {'cell' if cells == 1 else 'cells'}",
+            expected=f"{expected}, as in the other rows",
+            hint="remove or repair this row",
+        )
 
     # rows to spans
 
-    def _spans(self, times: IntArray, codes: dict[str, LevelArray], numbers: IntArray) -> Iterator[Span]:
+    def _stretch(
+        self, times: IntArray, codes: dict[str, LevelArray], numbers: IntArray, is_fresh: bool
+    ) -> Iterator[Span]:
+        """The spans of rows none of which is missing. is_fresh: rows are missing ahead of the first."""
+        tally = self.tally
+        if is_fresh and tally.rows:
+            yield from self._restarted()
+            self._finder.resume()
+        seen = {name: self._filled(name, column, self._seen) for name, column in codes.items()}
         above = {
-            name: np.concatenate([self._above.get(name, column[:1]), column[:-1]]) for name, column in codes.items()
+            name: np.concatenate([self._above.get(name, column[:1]), column[:-1]]) for name, column in seen.items()
         }
-        repeats = np.logical_and.reduce([column == above[name] for name, column in codes.items()] or [times == times])
+        repeats = np.logical_and.reduce([column == above[name] for name, column in seen.items()] or [times == times])
         breaks = self._finder.feed(times, repeats)
-        self._measure(times, breaks)
+        if is_fresh and tally.rows and times[0] < self._above_time:
+            self._note_break(Break(0, "time_reversal", self._above_time - int(times[0])), times, seen, above, numbers)
+        self._measure(times, breaks, is_fresh)
         start = 0
         for found in breaks:
             yield from self._segment(
                 times[start : found.row], {name: c[start : found.row] for name, c in codes.items()}
             )
-            self._note_break(found, times, codes, above, numbers)
-            yield from self._builder.last_span()
-            self._builder = SpanBuilder(joined=False)
-            for reader in self._readers.values():
-                reader.restart()
+            self._note_break(found, times, seen, above, numbers)
+            yield from self._restarted()
             start = found.row
         yield from self._segment(times[start:], {name: column[start:] for name, column in codes.items()})
-        self._above = {name: column[-1:] for name, column in codes.items()}
+        self._above = {name: column[-1:] for name, column in seen.items()}
         self._above_time = int(times[-1])
+
+    def _restarted(self) -> Iterator[Span]:
+        """The end of what was read; what comes next does not continue it."""
+        yield from self._builder.last_span()
+        self._builder = SpanBuilder(joined=False)
+        self._levels = dict.fromkeys(self._levels, UNKNOWN)
+
+    def _filled(self, name: str, codes: LevelArray, before: dict[str, int]) -> LevelArray:
+        """The levels of a line, of which `before` knows the last one."""
+        if name not in before:
+            return codes
+        levels = filled(codes, before[name])
+        before[name] = int(levels[-1])
+        return levels
 
     def _segment(self, times: IntArray, codes: dict[str, LevelArray]) -> Iterator[Span]:
         if times.size:
-            levels = {name: self._readers[name].levels(column) for name, column in codes.items()}
+            levels = {name: self._filled(name, column, self._levels) for name, column in codes.items()}
             span = self._builder.maybe_span(times, levels)
             if span is not None:
                 yield span
 
-    def _measure(self, times: IntArray, breaks: Sequence[Break]) -> None:
+    def _measure(self, times: IntArray, breaks: Sequence[Break], is_fresh: bool) -> None:
         tally = self.tally
         if not tally.rows:
             self._above_time = tally.first = tally.last = int(times[0])
         steps = np.diff(times, prepend=self._above_time)
         steps[[found.row for found in breaks]] = 0
-        tally.grid = int(np.gcd.reduce(steps, initial=tally.grid))
+        if is_fresh:
+            steps[0] = 0
+        tally.intervals.add(steps)
         tally.first = min(tally.first, int(times.min()))
         tally.last = max(tally.last, int(times.max()))
         tally.rows += times.size
@@ -358,13 +702,13 @@ class _Reading:
         self,
         found: Break,
         times: IntArray,
-        codes: dict[str, LevelArray],
+        seen: dict[str, LevelArray],
         above: dict[str, LevelArray],
         numbers: IntArray,
     ) -> None:
         row = found.row
         time = int(times[row - 1]) if row else self._above_time
-        pairs = [(int(column[row]), int(above[name][row])) for name, column in codes.items()]
+        pairs = [(int(column[row]), int(above[name][row])) for name, column in seen.items()]
         changed = sum(now != before and now < 2 and before < 2 for now, before in pairs)
         self.tally.breaks.append(_Place(found.kind, time, found.ticks, int(numbers[row]), changed))
         self.tally.reversals += found.kind == "time_reversal"
@@ -377,44 +721,3 @@ class _Reading:
                 expected="rows in order of time",
                 hint="sort the rows by time, or export the capture again",
             )
-
-    # faults
-
-    def _time_fault(self, error: TimeError, frame: pd.DataFrame, block: Block) -> InputError:
-        time = self._dialect.time
-        assert time is not None
-        return InputError(
-            error.problem,
-            file=self._file,
-            row=int(block.numbers[error.position]),
-            column=self._dialect.names[time],
-            found=repr(str(frame[time].iloc[error.position])),
-            expected=error.expected,
-            hint="remove or repair this row",
-        )
-
-    def _level_fault(self, error: LevelError, name: str, block: Block) -> InputError:
-        if error.is_number:
-            hint = "for a file of voltages give [capture] threshold_v = [low, high] in the sheet"
-        else:
-            hint = "name another column in [lines], or repair this row"
-        return InputError(
-            "a value that is not a level",
-            file=self._file,
-            row=int(block.numbers[error.position]),
-            column=name,
-            found=repr(error.text),
-            expected="0 or 1, or x, z or u where the level is not known",
-            hint=hint,
-        )
-
-    def _ragged(self, row: int, cells: int) -> InputError:
-        expected = self._dialect.shape.cells
-        return InputError(
-            "a row with too few cells" if cells < expected else "a row with too many cells",
-            file=self._file,
-            row=row,
-            found=f"{cells} {'cell' if cells == 1 else 'cells'}",
-            expected=f"{expected}, as in the other rows",
-            hint="remove or repair this row",
-        )

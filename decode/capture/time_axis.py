@@ -4,12 +4,15 @@ A float of 64 bits holds about 16 digits: 1.7 billion seconds with nine decimals
 0.1. So the text is read as a decimal number of fixed scale (arrow's 128-bit decimals), whose unscaled integer is the
 tick count. A tick is a power of ten of a second, three digits finer than what the first rows print, at most a
 picosecond, and coarse enough that the axis cannot leave an int64.
+
+Date-times (ISO 8601, arrow's reading of it) become nanoseconds from the first of them.
 """
 
 from __future__ import annotations
 
+import re
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from decimal import Decimal, InvalidOperation
 from fractions import Fraction
 
@@ -17,7 +20,7 @@ import numpy as np
 import pyarrow as pa
 import pyarrow.compute as pc
 
-from decode.spans import IntArray
+from decode.spans import BoolArray, IntArray
 
 UNIT_DIGITS = {"s": 0, "ms": 3, "us": 6, "ns": 9, "ps": 12}
 """Decimal places of a second that each unit stands for."""
@@ -49,6 +52,9 @@ class Scale:
     unit_digits: int
     printed: int
     decimal: str = "."
+    noisy: bool = False
+    origin: int | None = None
+    zoned: bool = False
 
     @property
     def tick(self) -> Fraction:
@@ -61,14 +67,8 @@ class Scale:
         return self.digits - self.unit_digits
 
 
-class TimeError(ValueError):
-    """A text that is not a time. position: its index among those given; problem, expected: as in an InputError."""
-
-    def __init__(self, position: int, problem: str, expected: str) -> None:
-        super().__init__(problem)
-        self.position = position
-        self.problem = problem
-        self.expected = expected
+NUMBER = r"^[+-]?([0-9]+\.?[0-9]*|\.[0-9]+)([eE][+-]?[0-9]{1,4})?$"
+_DATE = re.compile(r"\d{4}-\d\d-\d\d[T ]\d\d:\d\d(:\d\d([.,]\d{1,9})?)?(?P<zone>Z|[+-]\d\d:?\d\d)?", re.ASCII)
 
 
 def maybe_decimal(text: str) -> Decimal | None:
@@ -91,7 +91,24 @@ def choose_scale(texts: Sequence[str], unit: str, decimal: str = ".") -> Scale:
     digits = min(FINEST_DIGITS, printed + GUARD_DIGITS)
     while largest.scaleb(digits) >= _FARTHEST:
         digits -= 1
-    return Scale(digits, unit_digits, 10 ** max(0, digits - printed), decimal)
+    noisy = any(_decimals(number) + unit_digits > digits for number in numbers)
+    return Scale(digits, unit_digits, 10 ** max(0, digits - printed), decimal, noisy)
+
+
+def is_date(text: str) -> bool:
+    """Whether a cell is an ISO 8601 date with a time of day."""
+    return _DATE.fullmatch(text.strip()) is not None
+
+
+def date_scale(texts: Sequence[str]) -> Scale:
+    """The scale for a column whose first cells are `texts`, of which at least one is a date-time: a tick is 1 ns, and
+    times count from the first."""
+    found = [match for text in texts if (match := _DATE.fullmatch(text.strip()))]
+    zoned = found[0].group("zone") is not None
+    decimals = max(len(match.group(2) or ".") - 1 for match in found)
+    scale = Scale(9, 0, 10 ** (9 - decimals), ".", origin=0, zoned=zoned)
+    first = to_ticks(pa.array([found[0].group()], pa.string()), scale).ticks[0]
+    return replace(scale, origin=int(first))
 
 
 def _decimals(number: Decimal) -> int:
@@ -103,19 +120,30 @@ def _decimals(number: Decimal) -> int:
     return max(0, -exponent)
 
 
-def to_ticks(texts: pa.Array, scale: Scale) -> tuple[IntArray, int | None]:
-    """((n,) ticks, index of the first that had to be rounded or None) of n decimal texts in the column's unit.
+@dataclass(frozen=True, slots=True, eq=False)
+class Ticks:
+    """n times. rounded: index of the first that was finer than a tick, or None. bad: (n,) which of the texts are no
+    time within the axis (their ticks mean nothing), or None where all are."""
 
-    Raises TimeError with the first text that is not a number or lies outside the axis.
-    """
+    ticks: IntArray
+    rounded: int | None = None
+    bad: BoolArray | None = None
+
+
+def to_ticks(texts: pa.Array, scale: Scale) -> Ticks:
+    """The times of n texts, in the column's unit or as ISO 8601 date-times."""
+    if scale.origin is not None:
+        return _date_ticks(texts, scale, scale.origin)
     if scale.decimal != ".":
         texts = pc.replace_substring(texts, scale.decimal, ".")
+    if scale.noisy:
+        return _rounded(pc.utf8_trim_whitespace(texts), scale)
     try:
-        return _unscaled(pc.cast(texts, pa.decimal128(38, scale.places))), None
+        return Ticks(_unscaled(pc.cast(texts, pa.decimal128(38, scale.places))))
     except (pa.ArrowInvalid, OverflowError):
         texts = pc.utf8_trim_whitespace(texts)
     try:
-        return _unscaled(pc.cast(texts, pa.decimal128(38, scale.places))), None
+        return Ticks(_unscaled(pc.cast(texts, pa.decimal128(38, scale.places))))
     except (pa.ArrowInvalid, OverflowError):
         return _rounded(texts, scale)
 
@@ -130,30 +158,65 @@ def _unscaled(numbers: pa.Array) -> IntArray:
     return np.ascontiguousarray(low)
 
 
-def _rounded(texts: pa.Array, scale: Scale) -> tuple[IntArray, int | None]:
-    """As `to_ticks`, for texts with more digits than a tick: rounded half to even."""
+def _rounded(texts: pa.Array, scale: Scale) -> Ticks:
+    """As `to_ticks`, for texts with more digits than a tick (rounded half to even) or that are no numbers."""
+    bad = ~np.asarray(pc.match_substring_regex(texts, NUMBER).to_numpy(zero_copy_only=False), np.bool_)
+    if bad.any():
+        texts = pc.if_else(pa.array(bad), "0", texts)
     try:
         exact = pc.cast(texts, pa.decimal256(76, _EXACT_DIGITS))
         rounded = pc.round(exact, scale.places)
         ticks = _unscaled(pc.cast(rounded, pa.decimal128(38, scale.places)))
-        return ticks, pc.index(pc.not_equal(exact, rounded), True).as_py()
     except (pa.ArrowInvalid, OverflowError):
-        return _rounded_one_by_one(texts.to_pylist(), scale)
+        return _rounded_one_by_one(texts.to_pylist(), scale, bad)
+    first = pc.index(pc.not_equal(exact, rounded), True).as_py()
+    return Ticks(ticks, None if first < 0 else first, bad if bad.any() else None)
 
 
-def _rounded_one_by_one(texts: Sequence[str], scale: Scale) -> tuple[IntArray, int | None]:
-    """The plain version, in words of Decimal: it knows which text is at fault."""
-    ticks = np.empty(len(texts), np.int64)
+def _rounded_one_by_one(texts: Sequence[str], scale: Scale, bad: BoolArray) -> Ticks:
+    """The plain version, in words of Decimal."""
+    ticks = np.zeros(len(texts), np.int64)
+    bad = bad.copy()
     finer: int | None = None
     for position, text in enumerate(texts):
         number = maybe_decimal(text)
-        if number is None:
-            raise TimeError(position, "a time that is not a number", "a decimal number")
-        exact = Fraction(number) * Fraction(10) ** scale.places
-        whole = round(exact)
-        if not -_FARTHEST < whole < _FARTHEST:
-            raise TimeError(position, "a time too far from the first rows", "times that can be told apart in 64 bits")
-        if whole != exact and finer is None:
+        whole = None if number is None else round(Fraction(number) * Fraction(10) ** scale.places)
+        if number is None or whole is None or not -_FARTHEST < whole < _FARTHEST:
+            bad[position] = True
+            continue
+        if finer is None and whole != Fraction(number) * Fraction(10) ** scale.places:
             finer = position
         ticks[position] = whole
-    return ticks, finer
+    return Ticks(ticks, finer, bad if bad.any() else None)
+
+
+def _date_ticks(texts: pa.Array, scale: Scale, origin: int) -> Ticks:
+    """Nanoseconds from `origin`, which is in nanoseconds of the Unix epoch."""
+    texts = pc.replace_substring(pc.utf8_trim_whitespace(texts), ",", ".")
+    kind = pa.timestamp("ns", "UTC") if scale.zoned else pa.timestamp("ns")
+    bad = None
+    try:
+        since = pc.cast(texts, kind)
+    except pa.ArrowInvalid:
+        since, bad = _dates_one_by_one(texts.to_pylist(), kind)
+    return Ticks(pc.cast(since, pa.int64()).to_numpy(zero_copy_only=False) - origin, None, bad)
+
+
+def _dates_one_by_one(texts: Sequence[str], kind: pa.DataType) -> tuple[pa.Array, BoolArray]:
+    values, bad = [], np.zeros(len(texts), np.bool_)
+    for position, text in enumerate(texts):
+        try:
+            values.append(pc.cast(pa.scalar(text), kind).cast(pa.int64()).as_py())
+        except pa.ArrowInvalid:
+            values.append(0)
+            bad[position] = True
+    return pa.array(values, pa.int64()), bad
+
+
+def explain(text: str, scale: Scale) -> tuple[str, str]:
+    """(problem, expected) for a text that `to_ticks` found bad."""
+    if scale.origin is not None:
+        return "a time that is not a date-time like the others", "such as 2024-05-31T12:00:00.000000000"
+    if maybe_decimal(text.strip().replace(scale.decimal, ".")) is None:
+        return "a time that is not a number", "a decimal number"
+    return "a time too far from the first rows", "times that can be told apart in 64 bits"

@@ -12,13 +12,13 @@ Edges in a burst alternate, so the k-th leading edge (away from rest) is edge 2k
 from __future__ import annotations
 
 import itertools
-from collections.abc import Iterator
+from collections.abc import Iterator, Sequence
 from dataclasses import dataclass, fields, replace
 
 import numpy as np
 import numpy.typing as npt
 
-from decode.spans import NO_TICK, BoolArray, Edges, IntArray
+from decode.spans import NO_TICK, UNKNOWN, BoolArray, Edges, IntArray, Span, cut
 
 PILOT_EDGES = 4096
 """How many clock edges the rhythm is learnt from: some 50 frames, and a small part of any capture."""
@@ -185,6 +185,36 @@ class Bursts:
     def _may_join(self, edges: int, pause: float) -> BoolArray:
         close = self.first_edge[1:] - self.last_edge[:-1] < pause
         return np.asarray(close & (self.count[:-1] < edges), np.bool_)
+
+
+def known_parts(span: Span, names: Sequence[str]) -> Iterator[Span]:
+    """A span cut wherever a line of `names` begins or ceases to be unknown.
+
+    In a part such a line is unknown all along (its initial level says so) or never; an edge from or to an unknown
+    level is none of a part's edges, and breaks the capture there (`joined` is False).
+    """
+    told = [span.lines[name] for name in names]
+    if all(edges.initial != UNKNOWN and not (edges.levels == UNKNOWN).any() for edges in told):
+        yield span
+        return
+    at = [int(tick) for edges in told for tick in edges.times[_from_or_to_unknown(edges)]]
+    for part in cut(span, at):
+        settled = {name: _settled(part.lines[name], part.start) for name in names}
+        joined = part.joined and all(settled[name] is part.lines[name] for name in names)
+        yield Span(part.start, part.stop, {**part.lines, **settled}, joined)
+
+
+def _from_or_to_unknown(edges: Edges) -> BoolArray:
+    unknown = np.concatenate([[edges.initial], edges.levels]) == UNKNOWN
+    return np.asarray(unknown[1:] | unknown[:-1], np.bool_)
+
+
+def _settled(edges: Edges, start: int) -> Edges:
+    """The edges behind `start`, where one at that very tick is from or to an unknown level; else all of them."""
+    first = int(np.searchsorted(edges.times, start, side="right"))
+    if not _from_or_to_unknown(edges)[:first].any():
+        return edges
+    return Edges(int(edges.levels[first - 1]), edges.times[first:], edges.levels[first:])
 
 
 def find_bursts(clock: Edges, select: Edges | None, rhythm: Rhythm) -> tuple[Bursts, IntArray]:

@@ -15,7 +15,7 @@ import numpy.typing as npt
 
 from decode.anomalies import Anomalies, Severity
 from decode.distribution import Distribution
-from decode.serial.clock import PILOT_EDGES, SHORT_PULSE, Bursts, Rhythm, find_bursts, short_pulses
+from decode.serial.clock import PILOT_EDGES, SHORT_PULSE, Bursts, Rhythm, find_bursts, known_parts, short_pulses
 from decode.serial.frames import Frames, Word, words
 from decode.serial.interfaces import READERS, TIMED_OUT, Habit, Reading, resting_level
 from decode.serial.timing import Samples, clock_timing, data_phase, sample_timing, time_out
@@ -95,7 +95,23 @@ class Receiver:
         self._open = False
 
     def feed(self, span: Span) -> Frames:
-        """The frames that are over now that this span is known."""
+        """The frames that are over now that this span is known.
+
+        While the level of the clock or the select line is unknown there is no capture of this interface: what waits
+        is finished as if it ended, and begins afresh behind.
+        """
+        clock, _, select = self._names
+        names = [clock] if select is None else [clock, select]
+        done = []
+        for part in known_parts(span, names):
+            if any(part.lines[name].initial == UNKNOWN for name in names):
+                done.append(self.finish())
+                self._kept = part.stop
+            else:
+                done.append(self._feed(part))
+        return self._together(done)
+
+    def _feed(self, span: Span) -> Frames:
         done = []
         if self._open and not span.joined:
             done.append(self.finish())

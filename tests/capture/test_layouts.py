@@ -97,7 +97,7 @@ def table(header: str, delimiter: str, time: str = "{}", end: str = "\n", cell: 
             table("Time [ns],A,B", ",", cell="{}.3"),
             CaptureKeys(threshold_v=(0.5, 1.2)),
             AB,
-            "comma-separated, header, time in ns, voltages, a row per change",
+            "comma-separated, header, time in ns, voltages, a row per sample",
         ),
         (
             table("", ",", "0.0000000{:02}"),
@@ -223,30 +223,31 @@ def test_thresholds(tmp_path: Path) -> None:
         ("\n0.5 0\n1.5 1\n", NONE, [
             "the separator is taken to be a space",
             "there is no header: columns are numbered from 1",
+            "column '1' is taken for the time",
             "the unit of time is taken to be s: column '1' has decimals and names no unit",
         ]),
         ("T [us];A\n0,5;0\n", CaptureKeys(time_unit="ns", sample_rate_hz=1e6), [
             "the separator is taken to be a semicolon",
             "line 1 is taken for the header",
             "the decimal mark is a comma",
-            "sample_rate_hz is not used: column 'T [us]' holds the time",
-            "time_unit is not used: the header of column 'T [us]' says us",
+            "the time is in ns, as given, where the header of column 'T [us]' says us",
+            "sampled at 1000000 Hz, as given",
         ]),
         ("n\tA\t\n0\t0\t\n5\t1\t\n", CaptureKeys(sample_rate_hz=2.5e6), [
             "the separator is taken to be a tab, with one at the end of each row",
             "line 1 is taken for the header",
-            "column 'n' counts samples at 2500000 Hz",
+            "column 'n' counts samples at 2500000 Hz, as given",
         ]),
         ("1\n0\n", CaptureKeys(sample_rate_hz=2.5e6), [
             "the file has one column",
             "there is no header: columns are numbered from 1",
-            "no time column: the rows are samples at 2500000 Hz",
+            "no time column: the rows are samples at 2500000 Hz, as given",
         ]),
         ("Time,A\n0,0.3\n10,1.6\n", CaptureKeys(time_unit="ns", threshold_v=(1, 1.5)), [
             "the separator is taken to be a comma",
             "line 1 is taken for the header",
-            "the time is in ns, as the sheet says",
-            "voltages: low at or below 1 V, high at or above 1.5 V, in between as before",
+            "the time is in ns, as given",
+            "voltages in A: low at or below 1, high at or above 1.5, as given; else as before",
         ]),
         ("Time [ns],A\n0,0\n\n# here\n10,1\n  \n20,0\n30", NONE, [
             "the separator is taken to be a comma",

@@ -5,19 +5,22 @@ from __future__ import annotations
 from decimal import ROUND_HALF_EVEN, Decimal
 from fractions import Fraction
 
+import numpy as np
 import pyarrow as pa
 import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
-from decode.capture.time_axis import Scale, TimeError, choose_scale, maybe_decimal, to_ticks
+from decode.capture.time_axis import Scale, choose_scale, date_scale, explain, is_date, maybe_decimal, to_ticks
 
 PICOSECONDS = Scale(12, 0, 1)
 
 
 def ticks(*texts: str, scale: Scale = PICOSECONDS) -> tuple[list[int], int | None]:
-    found, rounded = to_ticks(pa.array(texts, pa.string()), scale)
-    return found.tolist(), rounded
+    """The ticks, and the first that was rounded; none of the texts may be bad."""
+    found = to_ticks(pa.array(texts, pa.string()), scale)
+    assert found.bad is None
+    return found.ticks.tolist(), found.rounded
 
 
 @pytest.mark.parametrize(
@@ -67,11 +70,44 @@ def test_rounded(texts: list[str], expected: list[int], first: int) -> None:
         (["1e300"], 0, "a time too far from the first rows"),
     ],
 )
-def test_refused(texts: list[str], position: int, problem: str) -> None:
-    """The first text that cannot be used, by its place."""
-    with pytest.raises(TimeError) as error:
-        ticks(*texts)
-    assert (error.value.position, error.value.problem) == (position, problem)
+def test_bad(texts: list[str], position: int, problem: str) -> None:
+    """The texts that cannot be used, the others in their places, and the words for it."""
+    found = to_ticks(pa.array([*texts, "2"], pa.string()), PICOSECONDS)
+    assert found.bad is not None
+    assert np.flatnonzero(found.bad).tolist() == [position]
+    assert found.ticks[-1] == 2 * 10**12
+    assert explain(texts[position], PICOSECONDS)[0] == problem
+
+
+@pytest.mark.parametrize(
+    ("texts", "expected"),
+    [
+        (["2024-05-31T12:00:00.123456789", "2024-05-31T12:00:00.123456790"], [0, 1]),
+        (["2024-05-31 12:00", "2024-06-01 12:00"], [0, 86_400 * 10**9]),
+        (["2024-05-31T12:00:00Z", "2024-05-31T14:00:00.5+02:00"], [0, 5 * 10**8]),
+        (["2024-05-31T12:00:00,5Z", "2024-05-31T12:00:00,25Z"], [0, -25 * 10**7]),
+        (["2024-02-28T23:59:59", "2024-02-29T00:00:00"], [0, 10**9]),
+    ],
+)
+def test_date_times(texts: list[str], expected: list[int]) -> None:
+    """Nanoseconds from the first, whatever the zone. Source: ISO 8601; differences worked out by hand."""
+    found = to_ticks(pa.array(texts, pa.string()), date_scale(texts))
+    assert (found.ticks.tolist(), found.bad) == (expected, None)
+
+
+def test_bad_date_times() -> None:
+    """No date, one without the zone of the others, and a thirteenth month."""
+    texts = ["2024-05-31T12:00:00Z", "soon", "2024-05-31T12:00:00", "2024-13-01T00:00:00Z", "2024-05-31T12:00:01Z"]
+    found = to_ticks(pa.array(texts, pa.string()), date_scale(texts))
+    assert found.bad is not None
+    assert found.bad.tolist() == [False, True, True, True, False]
+    assert found.ticks[-1] == 10**9
+    assert explain("soon", date_scale(texts))[0] == "a time that is not a date-time like the others"
+
+
+@pytest.mark.parametrize("text", ["2024-05-31", "12:00:00", "31.05.2024 12:00", "2024-05-31T12:00:00.1234567891", ""])
+def test_not_a_date_time(text: str) -> None:
+    assert not is_date(text)
 
 
 @pytest.mark.parametrize(
