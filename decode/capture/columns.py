@@ -35,6 +35,7 @@ from decode.spans import UNKNOWN, FloatArray
 LEVEL, VOLTAGE, PORT, COUNTS, READINGS, WORDS = "level", "voltage", "port", "counts", "readings", "words"
 
 LOW_SHARE, HIGH_SHARE = 0.3, 0.7
+_FEW_CELLS = 8
 _NEAR = 0.15
 _RISING = 0.9
 _COUNTING = 0.8
@@ -149,7 +150,15 @@ def _column(table: Table, index: int, keys: CaptureKeys) -> Column:
             scale = 1000 if is_in_millivolts(table.names[index], table.units[index] if table.units else "") else 1
             return Column(index, VOLTAGE, (low * scale, high * scale), base=base)
     others = {number for number in numbers if number not in (0, 1)}
-    if logic and not (others and 1.0 not in numbers and _maybe_levels(np.array(sorted({*numbers}))) is not None):
+    if len(cells) < _FEW_CELLS and all(number.is_integer() for number in others):
+        # So few cells show no two levels: among some 0 and 1 a whole number is a cell gone wrong.
+        logic |= 2 * sum(is_level(cell, table.decimal) for cell in cells) >= len(cells)
+    if logic and not (
+        others
+        and 1.0 not in numbers
+        and len(cells) >= _FEW_CELLS
+        and _maybe_levels(np.array(sorted({*numbers}))) is not None
+    ):
         return Column(index, LEVEL, base=base)
     if is_numeric:
         levels = _maybe_levels(np.array(numbers))

@@ -249,7 +249,8 @@ def _resting_starts(clock: Edges, rhythm: Rhythm) -> Index:
 
 def short_pulses(edges: Edges, least: float) -> IntArray:
     """Ticks at which the line begins to change faster than `least` ticks, one for each such run of edges."""
-    short = np.diff(edges.times) < least
+    known = (edges.levels != UNKNOWN) & (np.concatenate([[edges.initial], edges.levels[:-1]]) != UNKNOWN)
+    short = (np.diff(edges.times) < least) & known[:-1] & known[1:]
     return np.asarray(edges.times[:-1][short & ~np.concatenate([[False], short[:-1]])], np.int64)
 
 

@@ -2,10 +2,12 @@
 
 Reads the whole file, takes the frames from the clock's pauses, checks every CRC, counts A/B by a table of 16
 transitions, and looks at the count from index to index. It knows this one board and this one layout, explains
-nothing, measures no time, and holds everything in memory. All frames and all edges are worked on at once, by numpy:
-it is as fast as such a script gets without a compiler.
+nothing, measures no time, and holds everything in memory. Two ways to the words:
 
-    python hand_script.py CAPTURE.csv        prints what it found as JSON
+    python hand_script.py CAPTURE.csv               a loop over the frames, as most begin
+    python hand_script.py CAPTURE.csv --matrix      all frames at once, as fast as it gets without a compiler
+
+Prints what it found as JSON.
 """
 
 import json
@@ -18,28 +20,58 @@ CLOCKS = 32  # latch, acknowledge, start, CDS, 27 bits, stop
 PAUSE_S = 5e-6  # longer than this between two rising edges: a new frame
 POSITION, FLAGS, CRC = 19, 2, 6
 POLYNOMIAL = 0x43
+CRC_MASK = 2**CRC - 1
 
 # By the state before (A and B as two bits) times four, and the state after: up one, down one, 0 or a jump of two.
 STEP = np.array([0, -1, 1, 2, 1, 0, 2, -1, -1, 2, 0, 1, 2, 1, -1, 0])
 ILLEGAL = 2
 
 
-def frames(time, clock, data):
-    """(words, ok): the bits of each whole frame, and whether its CRC holds."""
+def bursts(time, clock):
+    """(rising, first, length): rows of the clock's rising edges; where among them each frame begins, and how many."""
     rising = np.flatnonzero((clock[1:] == 1) & (clock[:-1] == 0)) + 1
     first = np.concatenate([[0], np.flatnonzero(np.diff(time[rising]) > PAUSE_S) + 1])
-    length = np.diff(np.append(first, rising.size))
+    return rising, first, np.diff(np.append(first, rising.size))
+
+
+# The data line changes after the rising edge that drives it, so at an edge it still holds the bit before.
+
+
+def frames_one_by_one(time, clock, data):
+    """(positions, ok): of each whole frame, and whether its CRC holds."""
+    positions, ok = [], []
+    rising, first, length = bursts(time, clock)
+    at_edges = data[rising]
+    for start, count in zip(first, length, strict=True):
+        bits = at_edges[start : start + count].tolist()
+        if count != CLOCKS or bits[1:4] != [1, 0, 1]:
+            continue
+        word = bits[5 : 5 + POSITION + FLAGS + CRC]
+        register = 0
+        for bit in word[: POSITION + FLAGS]:
+            out = (register >> (CRC - 1)) ^ bit
+            register = (register << 1) & CRC_MASK
+            if out:
+                register ^= POLYNOMIAL & CRC_MASK
+        sent = int("".join(map(str, word[POSITION + FLAGS :])), 2)
+        positions.append(int("".join(map(str, word[:POSITION])), 2))
+        ok.append(register ^ CRC_MASK == sent)
+    return np.array(positions), np.array(ok)
+
+
+def frames_as_a_matrix(time, clock, data):
+    """The same, column by column over all frames."""
+    rising, first, length = bursts(time, clock)
     whole = first[length == CLOCKS]
-    # The data line changes after the rising edge that drives it, so at an edge it still holds the bit before.
     bits = data[rising[whole[:, None] + np.arange(CLOCKS)]]
     started = (bits[:, 1] == 1) & (bits[:, 2] == 0) & (bits[:, 3] == 1)
-    word = bits[started, 5 : 5 + POSITION + FLAGS + CRC].astype(np.int64)
+    word = bits[started, 5 : 5 + POSITION + FLAGS + CRC]
     register = np.zeros(len(word), np.int64)
     for column in word[:, : POSITION + FLAGS].T:
         out = (register >> (CRC - 1)) ^ column
-        register = ((register << 1) & (2**CRC - 1)) ^ (out * (POLYNOMIAL & (2**CRC - 1)))
+        register = ((register << 1) & CRC_MASK) ^ (out * (POLYNOMIAL & CRC_MASK))
     sent = word[:, POSITION + FLAGS :] @ (1 << np.arange(CRC - 1, -1, -1))
-    return word, (register ^ (2**CRC - 1)) == sent
+    return word[:, :POSITION] @ (1 << np.arange(POSITION - 1, -1, -1)), register ^ CRC_MASK == sent
 
 
 def quadrature(a, b):
@@ -51,21 +83,20 @@ def quadrature(a, b):
     return change, np.cumsum(np.where(illegal, 0, step)), int(illegal.sum())
 
 
-def main(path):
+def main(path, frames):
     table = pd.read_csv(path)
     time = table["Time [s]"].to_numpy()
     clock, data, a, b, index = (table[name].to_numpy() for name in ("MA", "SLO", "A", "B", "Z"))
-    word, ok = frames(time, clock, data)
-    position = word[:, :POSITION] @ (1 << np.arange(POSITION - 1, -1, -1))
+    positions, ok = frames(time, clock, data)
     rows, count, illegal = quadrature(a, b)
     pulses = np.flatnonzero(np.diff(index) == 1) + 1
     at_index = count[np.searchsorted(rows, pulses, side="right") - 1]
     per_turn = np.diff(at_index)
     found = {
-        "frames": len(word),
+        "frames": len(positions),
         "good": int(ok.sum()),
-        "position_min": int(position.min()),
-        "position_max": int(position.max()),
+        "position_min": int(positions.min()),
+        "position_max": int(positions.max()),
         "edges": len(rows),
         "net_counts": int(count[-1]),
         "illegal": illegal,
@@ -77,4 +108,4 @@ def main(path):
 
 
 if __name__ == "__main__":
-    main(sys.argv[1])
+    main(sys.argv[1], frames_as_a_matrix if "--matrix" in sys.argv else frames_one_by_one)

@@ -1,6 +1,6 @@
 """The captures that are measured, each made once and kept with its truth beside it.
 
-One board, turning steadily at 60 turns a second with 20 ns of jitter on its A/B edges: 96 change rows a frame. A long
+One board, turning steadily at 60 turns a second with 20 ns of jitter on its A/B edges: 97 change rows a frame. A long
 capture is a simulated stretch written several times over, each time later. The stretch holds whole turns and whole
 frame periods, so every line ends at the level it began with, nothing happens at a joint, and every count is the
 stretch's times the number of repeats, exactly.
