@@ -78,7 +78,10 @@ def test_rates_in_preambles(line: str, rate: int | None) -> None:
 
 def test_a_rate_that_can_be_read_in_two_ways() -> None:
     """24 or 24000 MHz: not used, and its line is kept. A later line that is clear is."""
-    assert (read_preamble([(3, "Sample rate: 24,000 MHz")]).rate, read_preamble([(3, "Sample rate: 24,000 MHz")]).unclear) == (
+    assert (
+        read_preamble([(3, "Sample rate: 24,000 MHz")]).rate,
+        read_preamble([(3, "Sample rate: 24,000 MHz")]).unclear,
+    ) == (
         None,
         3,
     )
@@ -176,7 +179,9 @@ def test_a_level_beside_voltages_stays_one(tmp_path: Path) -> None:
     capture = opened(tmp_path, content, CaptureKeys(threshold_v=(1.2, 1.8)))
     edges = [span.lines["B"].times.size for span in capture.spans(["A", "B"])]
     assert sum(edges) == 19
-    assert voltage_notes(capture) == ["voltages in A: low at or below 1.2, high at or above 1.8, as given; else as before"]
+    assert voltage_notes(capture) == [
+        "voltages in A: low at or below 1.2, high at or above 1.8, as given; else as before"
+    ]
 
 
 def test_thresholds_for_millivolts(tmp_path: Path) -> None:

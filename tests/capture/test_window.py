@@ -82,7 +82,13 @@ STEPS = st.lists(st.tuples(st.integers(1, 9), st.integers(0, 1), st.integers(0, 
 
 
 @settings(deadline=None, max_examples=100, suppress_health_check=[HealthCheck.function_scoped_fixture])
-@given(STEPS, st.sampled_from(["changes", "voltages", "one line"]), st.integers(0, 250), st.integers(1, 250), st.integers(1, 9))
+@given(
+    STEPS,
+    st.sampled_from(["changes", "voltages", "one line"]),
+    st.integers(0, 250),
+    st.integers(1, 250),
+    st.integers(1, 9),
+)
 def test_a_window_is_the_part_of_the_whole(
     tmp_path: Path, steps: list[tuple[int, int, int]], kind: str, start: int, length: int, size: int
 ) -> None:
