@@ -209,10 +209,12 @@ def check(
             expect_layout(table)
     _expect_apart(targets, [capture, str(chosen)])
 
+    options = {"start_s": start_s, "stop_s": stop_s, "rate": rate, "unit": unit, "threshold": threshold}
+    is_changed = any(option is not None for option in options.values())
+    board = with_options(load(chosen), **options) if is_changed else chosen
     with _showing_progress() as progress:
         from decode.pipeline import check as run
 
-        board = with_options(load(chosen), start_s=start_s, stop_s=stop_s, rate=rate, unit=unit, threshold=threshold)
         checked = run(capture, board, progress=progress, command=context.obj)
     report = checked.report if sheet is not None else _with_note(checked.report, chosen)
     _write(checked, report, json=json, frames=frames, angles=angles)

@@ -302,16 +302,15 @@ _LETTERS = {text for text in LEVEL_TEXTS if text.isalpha() and len(text) == 1}
 
 def _first_row(split: Sequence[Sequence[str]], start: int, cells: int) -> int:
     """Index of the first line from `start` on that is a row of the table, not the names above it."""
-    below = [row for row in split[start + 1 :] if len(row) == cells] or list(split[start:])
+    rows = [row for row in split[start:] if len(row) == cells]
+    below = rows[1:] or rows
     is_data = [
-        sum(is_datum(row[index]) or is_missing(row[index]) for row in below if index < len(row)) >= _MOST * len(below)
+        sum(is_datum(row[index]) or is_missing(row[index]) for row in below) >= _MOST * len(below)
         for index in range(cells)
     ]
     if not any(is_data):
         return start + 1
-    digits_only = [
-        all(row[index].lower() not in _LETTERS for row in below if index < len(row)) for index in range(cells)
-    ]
+    digits_only = [all(row[index].lower() not in _LETTERS for row in below) for index in range(cells)]
     for place in range(start, len(split)):
         row = split[place]
         if len(row) == cells and not _is_names(row, is_data, digits_only, below):

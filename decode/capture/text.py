@@ -32,8 +32,9 @@ class Block:
 
     rows: the text of the rows, each ended by a line feed. numbers: (n,) the physical line of each row. blank,
     comments: the physical lines that were skipped. broken: (m,) those that are no row, cells: (m,) how many cells each
-    of them has. places: (n,) how many lines that hold anything but comments stand ahead of each row in the whole
-    file; broken_places: (m,) the same for those that are no row. cut_short: the physical line within which the file ends, and which was dropped.
+    of them has. places: (n,) how many lines that hold anything but comments stand ahead of each row in the whole file;
+    broken_places: (m,) the same for those that are no row. cut_short: the physical line within which the file ends,
+    and which was dropped.
     """
 
     rows: bytes

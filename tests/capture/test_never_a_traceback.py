@@ -67,6 +67,22 @@ def test_text_of_the_right_letters(tmp_path: Path, text: str, encoding: str, key
     read_all(tmp_path / "x.csv", text.encode(encoding, "replace"), keys, rows)
 
 
+@pytest.mark.parametrize(
+    "content",
+    [
+        "Time [ns],A\n" + "".join(f"{i},{i & 1}\n" for i in range(400)) + "lost\n" * 9 + "500,1\n",
+        "Time [ns],A,B\n1\n2,0,1\n3,4\n",
+        "0;1;1\n2;1\n3\n",
+    ],
+)
+@pytest.mark.parametrize("rows_per_span", [1, 3, 200_000])
+def test_what_the_fuzzer_found(tmp_path: Path, content: str, rows_per_span: int) -> None:
+    """A block in which no line is a row; rows of which the only one of their width is the first. Inputs kept from
+    tests/fuzz, made small."""
+    for keys in KEYS:
+        read_all(tmp_path / "x.csv", content.encode(), keys, rows_per_span)
+
+
 CLEAN = [
     b"# made by hand\r\nTime [ns],A,B\r\n" + b"".join(b"%d,%d,%d\r\n" % (10 * i, i & 1, i >> 1 & 1) for i in range(30)),
     b"".join(b"%d.5e-3\t%d\tx\t\n" % (i, i & 1) for i in range(30)),
