@@ -22,7 +22,7 @@ import pytest
 from decode import cli
 from decode.cli import TEMPLATE, main
 from decode.errors import InputError
-from decode.sheet import from_toml, load
+from decode.sheet import from_toml
 
 sys.path.insert(0, str(Path(__file__).parent / "report"))
 samples = importlib.import_module("samples")
@@ -88,12 +88,12 @@ def test_the_pipeline_gets_the_command_as_it_was_typed(pipeline: Standin, captur
     Path("other sheet.toml").write_text(TEMPLATE)
     main(["check", capture, "--sheet", "other sheet.toml"])
     assert pipeline.command == "shaftproof check board.csv --sheet 'other sheet.toml'"
-    assert pipeline.called == ("board.csv", load("other sheet.toml"))
+    assert pipeline.called == ("board.csv", Path("other sheet.toml"))
 
 
 def test_a_sheet_beside_the_capture_is_taken_and_the_report_says_so(pipeline: Standin, capture: str) -> None:
     main(["check", capture, "--json", "r.json"])
-    assert pipeline.called[1] == load("board.toml")
+    assert pipeline.called[1] == Path("board.toml")
     note = "no sheet was named, so board.toml was taken, which stands beside the capture"
     assert json.loads(Path("r.json").read_text())["capture"]["notes"][0] == note
 
@@ -106,7 +106,7 @@ def test_a_named_sheet_is_no_note(pipeline: Standin, capture: str) -> None:
 def test_a_compressed_capture_has_its_sheet_under_the_bare_name(pipeline: Standin, capture: str) -> None:
     Path("board.csv.gz").write_bytes(b"")
     main(["check", "board.csv.gz"])
-    assert pipeline.called[1] == load("board.toml")
+    assert pipeline.called[1] == Path("board.toml")
 
 
 def test_without_a_sheet_the_message_says_how_to_write_one(
