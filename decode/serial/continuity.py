@@ -19,9 +19,10 @@ STEADY_SPREAD = 0.2
 STEADY_SHARE = 0.75
 WHOLE_SHARE = 0.95
 LONGEST_SKIP = 3
+FEW_SKIPS = 0.1
 """An unstated cadence is believed where STEADY_SHARE of the frame periods lie within STEADY_SPREAD of the median, and
-WHOLE_SHARE of them as near to a whole multiple of it, half of the longer ones to one of no more than LONGEST_SKIP: a
-master that reads in groups skips nothing (common practice, no source)."""
+WHOLE_SHARE of them as near to a whole multiple of it. Where more than FEW_SKIPS are longer, half of these must skip no
+more than LONGEST_SKIP: a master that reads in groups skips nothing (common practice, no source)."""
 
 SPOILT_BY_STUCK_DATA = (
     "no_acknowledge",
@@ -84,7 +85,7 @@ def _is_steady(steps: IntArray) -> bool:
     return bool(
         np.mean(near & (whole == 1)) >= STEADY_SHARE
         and np.mean(near) >= WHOLE_SHARE
-        and (longer.size == 0 or np.median(longer) <= LONGEST_SKIP)
+        and (longer.size <= FEW_SKIPS * steps.size or np.median(longer) <= LONGEST_SKIP)
     )
 
 
