@@ -19,6 +19,7 @@ import hashlib
 import io
 import re
 import zipfile
+import zlib
 from collections.abc import Callable, Collection, Generator, Iterator, Sequence
 from contextlib import ExitStack
 from dataclasses import dataclass
@@ -149,6 +150,19 @@ def _notes(found: Sequence[tuple[bytes, bytes]]) -> tuple[str, ...]:
 
 # --- npz -------------------------------------------------------------------------------------------------------------
 
+BROKEN_ARCHIVE = (
+    zipfile.BadZipFile,
+    zlib.error,
+    OSError,
+    ValueError,
+    EOFError,
+    KeyError,
+    NotImplementedError,
+    RuntimeError,
+    SyntaxError,
+)
+"""What reading a damaged npz archive may raise: from the zip around it, what is packed in it, or an array's header."""
+
 
 @dataclass(frozen=True, slots=True)
 class _Array:
@@ -169,7 +183,7 @@ def _archive(path: Path) -> Table:
                 for one in arrays
                 if one.length is None
             ]
-    except (zipfile.BadZipFile, OSError, ValueError, EOFError, NotImplementedError, RuntimeError) as error:
+    except BROKEN_ARCHIVE as error:
         raise _broken(path, "npz archive", error) from None
     columns = [one for one in arrays if one.length is not None]
     if not columns:
@@ -194,7 +208,7 @@ def _archive(path: Path) -> Table:
     def batches(wanted: Sequence[int]) -> Iterator[pa.RecordBatch]:
         try:
             yield from _batches(path, [columns[index] for index in wanted], columns[0].length or 0)
-        except (zipfile.BadZipFile, OSError, ValueError, EOFError, RuntimeError) as error:
+        except BROKEN_ARCHIVE as error:
             raise _broken(path, "npz archive", error) from None
 
     return Table("npz archive", flat, _notes(notes), columns[0].length or 0, batches)
