@@ -1,4 +1,4 @@
-"""Property tests try new examples at every run on a desk, and the same ones in CI: a landing should not hang on luck."""
+"""Property tests try new examples at every run on a desk, and the same ones in CI: luck should not decide there."""
 
 import os
 
