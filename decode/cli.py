@@ -18,7 +18,6 @@ import traceback
 from collections.abc import Iterator, Sequence
 from contextlib import contextmanager, suppress
 from enum import StrEnum
-from functools import partial
 from pathlib import Path
 from typing import TYPE_CHECKING, Annotated, Any
 
@@ -191,7 +190,7 @@ def check(
     width: _Width = None,
 ) -> int:
     """Check a capture against its sheet: the main job. A FILE named - is standard output."""
-    from decode.report.tables import expect_folder, expect_layout
+    from decode.report.tables import expect_layout, expect_place
     from decode.sheet import load
 
     if capture != STANDARD_INPUT and not Path(capture).exists():
@@ -203,7 +202,7 @@ def check(
     chosen = Path(sheet) if sheet is not None else expect_sheet_beside(Path(capture))
     targets = [target for target in (json, frames, angles) if target is not None]
     for target in targets:
-        expect_folder(target)
+        expect_place(target)
     for table in (frames, angles):
         if table is not None:
             expect_layout(table)
@@ -388,14 +387,14 @@ def simulate(
     from decode.bench.board import simulate as run
     from decode.bench.scenario import Scenario
     from decode.bench.writer import write_csv, write_truth
-    from decode.report.tables import expect_folder
+    from decode.report.tables import expect_place
     from decode.sheet import load
 
     beside = str(Path(output).with_suffix(".truth.json")) if truth is None else truth
     for target in (output, beside):
         if target == STANDARD_OUTPUT:
             raise InputError("a simulation is written to files", file=target, expected="the name of a file")
-        expect_folder(target)
+        expect_place(target)
     _expect_apart([output, beside], [sheet])
     scenario = Scenario(
         motion=_motion(motion, speed_rpm, from_rpm, sway_hz or 2 / duration_s),
@@ -411,11 +410,8 @@ def simulate(
         seed=seed,
     )
     simulation = run(load(sheet), scenario)
-    for write, target in ((partial(write_csv, every_sample=every_sample), output), (write_truth, beside)):
-        try:
-            write(simulation, target)
-        except OSError as error:
-            raise InputError("the file cannot be written", file=target, found=error.strerror) from error
+    write_csv(simulation, output, every_sample=every_sample)
+    write_truth(simulation, beside)
     print(f"{output} and {beside} written")
     return PASS
 

@@ -8,10 +8,7 @@ A file is there whole or not at all: it is written beside its place and then mov
 
 from __future__ import annotations
 
-import os
-import tempfile
 from collections.abc import Iterator, Sequence
-from contextlib import contextmanager
 from fractions import Fraction
 from pathlib import Path
 from typing import BinaryIO, Literal, NamedTuple
@@ -23,6 +20,7 @@ import numpy.typing as npt
 from decode.bench.board import Simulation
 from decode.bench.stages import Segment
 from decode.errors import InputError
+from decode.files import whole
 from decode.spans import IntArray
 
 Unit = Literal["s", "ms", "us", "ns"]
@@ -62,7 +60,7 @@ def write_csv(
     """
     columns = _columns(simulation, time_column)
     scale = _Scale.of(simulation.tick, unit) if time_column else None
-    with _whole(Path(path)) as file:
+    with whole(path) as file:
         for line in preamble:
             file.write((line + newline).encode())
         if header:
@@ -82,7 +80,7 @@ def write_truth(simulation: Simulation, path: str | Path) -> None:
     truth = msgspec.structs.replace(simulation.truth, frames=[])
     frames = b",\n".join(map(msgspec.json.encode, simulation.truth.frames))
     head = msgspec.json.format(msgspec.json.encode(truth), indent=1)
-    with _whole(Path(path)) as file:
+    with whole(path) as file:
         file.write(head.removesuffix(b"[]\n}") + b"[\n" + frames + b"\n]\n}\n")
 
 
@@ -183,20 +181,3 @@ def _decimal(size: IntArray, digits: int, decimals: int, negative: bool) -> Text
         rest, digit = np.divmod(rest, 10)
         text[:, text.shape[1] - 1 - place - (1 if decimals and place >= decimals else 0)] = digit + _ZERO
     return text
-
-
-@contextmanager
-def _whole(path: Path) -> Iterator[BinaryIO]:
-    """A file to write that takes its place only when all of it is there."""
-    handle, temporary = tempfile.mkstemp(dir=path.parent, prefix=f".{path.name}.", suffix=".part")
-    try:
-        with os.fdopen(handle, "wb") as file:
-            yield file
-        # mkstemp makes a private file; an export is as readable as any other new file.
-        mask = os.umask(0)
-        os.umask(mask)
-        os.chmod(temporary, 0o666 & ~mask)
-        os.replace(temporary, path)
-    except BaseException:
-        os.unlink(temporary)
-        raise

@@ -1,19 +1,11 @@
-"""Tables and texts to files: whole, or not at all.
-
-A file appears under its name only once everything stands in it: it is written beside its place under another name,
-forced to the disk, and then moved there in one step (POSIX rename, and its like on other systems). Whoever reads the
-folder meanwhile sees the file before or the file after, never a half of one. `-` stands for standard output.
-"""
+"""Tables and texts to files, in the layout that the file's name ends in. `-` stands for standard output."""
 
 from __future__ import annotations
 
 import io
-import os
-import stat
 import sys
 import zipfile
 from collections.abc import Callable
-from contextlib import suppress
 from pathlib import Path
 from typing import TYPE_CHECKING, BinaryIO
 
@@ -21,6 +13,7 @@ import numpy as np
 import numpy.typing as npt
 
 from decode.errors import InputError
+from decode.files import expect_folder, whole
 
 if TYPE_CHECKING:
     import pandas
@@ -37,7 +30,8 @@ def write_table(frame: pandas.DataFrame, path: str) -> None:
     if path == STANDARD_OUTPUT:
         _to_standard_output(frame.to_csv(index=False, lineterminator="\n"))
         return
-    _write_whole(path, lambda file: write(frame, file))
+    with whole(path) as file:
+        write(frame, file)
 
 
 def write_text_whole(path: str, text: str) -> None:
@@ -45,18 +39,14 @@ def write_text_whole(path: str, text: str) -> None:
     if path == STANDARD_OUTPUT:
         _to_standard_output(text)
         return
-    _write_whole(path, lambda file: _write_bytes(text.encode(), file))
+    with whole(path) as file:
+        file.write(text.encode())
 
 
-def expect_folder(path: str) -> None:
-    """Raise InputError unless a file could stand at `path`: asked before long work, not after it."""
-    if path == STANDARD_OUTPUT:
-        return
-    folder = Path(path).parent
-    if not folder.is_dir():
-        raise InputError("the folder does not exist", file=path, found=str(folder), hint="make the folder first")
-    if Path(path).is_dir():
-        raise InputError("this is a folder, not a file", file=path, expected="the name of a file")
+def expect_place(path: str) -> None:
+    """Raise InputError unless something could be written at `path`; it always can on standard output."""
+    if path != STANDARD_OUTPUT:
+        expect_folder(path)
 
 
 def expect_layout(path: str) -> Callable[[pandas.DataFrame, BinaryIO], None]:
@@ -118,41 +108,3 @@ def _to_standard_output(text: str) -> None:
     """As UTF-8, whatever the terminal speaks: this is for other programs."""
     sys.stdout.flush()
     sys.stdout.buffer.write(text.encode())
-
-
-def _write_bytes(content: bytes, file: BinaryIO) -> None:
-    file.write(content)
-
-
-def _write_whole(path: str, write: Callable[[BinaryIO], None]) -> None:
-    expect_folder(path)
-    # Through a link to the file it stands for, which is then replaced, and the link stays.
-    target = Path(os.path.realpath(path))
-    try:
-        if target.exists() and not stat.S_ISREG(target.stat().st_mode):
-            # A pipe or a device is written to, not replaced.
-            with target.open("wb") as file:
-                write(file)
-            return
-        _replace(target, write)
-    except OSError as error:
-        raise InputError(
-            "the file cannot be written",
-            file=path,
-            found=error.strerror or str(error),
-            hint="a folder you may write to, with room on its disk",
-        ) from error
-
-
-def _replace(target: Path, write: Callable[[BinaryIO], None]) -> None:
-    part = target.with_name(f".{target.name[:100]}.{os.getpid()}.part")
-    try:
-        with part.open("xb") as file:
-            write(file)
-            file.flush()
-            os.fsync(file.fileno())
-        os.replace(part, target)
-    except BaseException:
-        with suppress(OSError):
-            part.unlink()
-        raise

@@ -168,7 +168,7 @@ def test_a_file_is_whole_or_not_there(tmp_path: Path, monkeypatch: pytest.Monkey
         raise OSError("disk full")
 
     monkeypatch.setattr(writer, "_write_rows", broken)
-    with pytest.raises(OSError, match="disk full"):
+    with pytest.raises(InputError, match="cannot be written"):
         write_csv(simulate(BOARD, SHORT), tmp_path / "c.csv")
     assert [path.name for path in tmp_path.iterdir()] == ["c.csv"]
     assert (tmp_path / "c.csv").read_text() == "before"
