@@ -20,8 +20,11 @@ _TIME_NAME = re.compile(
 
 def maybe_unit(name: str) -> str | None:
     """The unit of time that a column's name ends with: in brackets, in parentheses, behind a slash or an underscore;
-    or that it is."""
+    or that it is. Behind a space it counts where the name is the time's ("time ms")."""
     match = _UNIT.search(name)
+    last = name.split()[-1:]
+    if match is None and last and _TIME_NAME.match(name) is not None and last[0].lower() in _UNITS:
+        return _UNITS[last[0].lower()]
     found = next(group for group in match.groups() if group) if match else name.strip()
     return _UNITS.get(found.lower())
 

@@ -27,9 +27,9 @@ from decode.spans import BoolArray, IntArray
 SAMPLES_NEEDED = 4
 """Samples in a clock period and in an A/B state below which nothing is decided (common practice, no source)."""
 
-READABLE = 3.5
-"""Samples in a clock period below which clock edges can be missed, so that no frame can be judged: below two they
-alias, and look like two to three (sampling theorem)."""
+READABLE = 4.5
+"""Samples in a clock period as it looks, below which clock edges can be missed and no frame can be judged: fewer than
+two alias, and then look like two to four (sampling theorem)."""
 
 AGREES_WITHIN = 1.5
 """Counts within which the serial position bears the count of a turn out (common practice, no source)."""
